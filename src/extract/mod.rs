@@ -1,0 +1,10 @@
+//! Layer 3, field -> geometry: stagnation points, level lines, separatrices, cells, fluxes.  May use: field, numerics.
+
+pub mod cells;
+pub mod contour;
+pub mod flux;
+pub mod levels;
+pub mod separatrix;
+pub mod stagnation;
+pub mod turning;
+pub mod wall_points;

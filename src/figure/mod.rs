@@ -1,0 +1,1 @@
+//! Layer 5, analysis -> picture.  May use: field, extract, analysis.

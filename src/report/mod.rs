@@ -1,0 +1,1 @@
+//! Layer 5, analysis -> tables, JSON.  May use: field, extract, analysis.
