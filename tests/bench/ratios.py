@@ -85,7 +85,7 @@ def main():
             print(f"{'':44s} peak memory = {memory * 2**20 / (8 * n * n):.1f} f64 arrays of the grid")
         print(f"growth of the time: {walls[1] / walls[0]:.2f} and {walls[2] / walls[1]:.2f} a step of 4 in nodes")
         path = str(folder / "1024r.npz")
-        compare("fit of a full rectangle, 1024 x 1024", [binary, "psi", "--quiet", "--no-screen", "--fit-only", path, "--out", out + ".npz"],
+        compare("fit of a full rectangle, 1024 x 1024", [binary, "psi", "--quiet", "--no-screen", path, "--out", out + ".npz"],
                 [python, peer, "cosine", path, out + ".npz"], repeats)
 
 
