@@ -4,6 +4,7 @@ pub mod cells;
 pub mod contour;
 pub mod flux;
 pub mod levels;
+mod patch_zeros;
 pub mod separatrix;
 pub mod stagnation;
 pub mod turning;
