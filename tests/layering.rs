@@ -41,7 +41,8 @@ fn imported(text: &str) -> Vec<String> {
             continue;
         }
         let rest = &code[at + "crate::".len()..];
-        let name = |s: &str| s.trim_start().chars().take_while(|c| c.is_alphanumeric() || *c == '_').collect::<String>();
+        let name =
+            |s: &str| s.trim_start().chars().take_while(|c| c.is_alphanumeric() || *c == '_').collect::<String>();
         if let Some(inner) = rest.strip_prefix('{') {
             let mut depth = 1;
             let mut piece = String::new();

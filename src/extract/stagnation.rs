@@ -553,7 +553,8 @@ mod tests {
     #[test]
     fn degenerate_flows_end_as_undecided_cells_without_points() {
         let domain = Domain::open(square(65));
-        let flows: [(&str, &dyn Fn(f64, f64) -> f64); 5] = [
+        type Psi<'a> = &'a dyn Fn(f64, f64) -> f64;
+        let flows: [(&str, Psi<'_>); 5] = [
             ("rest", &|_, _| 7.0),
             ("shear, zero on nodes", &|_, y| (y - 0.5).powi(2)),
             ("shear, zero between nodes", &|_, y| (y - 0.507).powi(2)),

@@ -131,7 +131,7 @@ fn edge_velocity(b: &[[f64; 4]; 4], side: Side, dx: f64, dy: f64) -> [[f64; 2]; 
 fn turn(v: &[[f64; 2]; 4], floor: f64, halvings: u32) -> Option<f64> {
     let dot = |a: [f64; 2], b: [f64; 2]| a[0] * b[0] + a[1] * b[1];
     let largest = v.iter().map(|&p| dot(p, p)).fold(0.0, f64::max).sqrt();
-    if !(largest > floor) || halvings > MAX_HALVINGS {
+    if largest <= floor || largest.is_nan() || halvings > MAX_HALVINGS {
         return None;
     }
     let unit = |p: [f64; 2]| {

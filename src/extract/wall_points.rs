@@ -280,7 +280,7 @@ impl Search<'_> {
         let length = curve.length();
         let spacing = grid.spacing();
         let wanted = (length / spacing * self.options.samples as f64).ceil();
-        if !(wanted > 0.0) {
+        if wanted.is_nan() {
             return Vec::new();
         }
         let count = (wanted as usize).clamp(16, MAX_SAMPLES);
