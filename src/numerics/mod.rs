@@ -1,8 +1,13 @@
 //! Layer 2, field -> field: screening, edge fluxes, fit of psi, surface, divergence.  May use: field.
 
+mod cholesky;
+mod dct;
 pub mod divergence;
 pub mod fill;
+pub mod flux;
+pub mod graph;
 pub mod helmholtz;
+mod multigrid;
 pub mod noise;
 pub mod screening;
 pub mod solver;

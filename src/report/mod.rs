@@ -1,1 +1,1 @@
-//! Layer 5, analysis -> tables, JSON.  May use: field, extract, analysis.
+//! Layer 5, analysis -> tables, JSON.  May use: field, io, numerics, extract, analysis.
