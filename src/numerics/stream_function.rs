@@ -358,7 +358,8 @@ impl StreamFunctionOperator {
                     let (psi, extra) = self.spread(&x, shape);
                     return Ok((psi, extra, report(SolverKind::Cholesky, StopReason::Direct, 0, relative)));
                 }
-                let product = grid.multiply(&outcome.x);
+                let mut product = vec![0.0; grid.len()];
+                grid.multiply(&outcome.x, &mut product);
                 let square = |v: &mut dyn Iterator<Item = f64>| v.map(|x| x * x).sum::<f64>().sqrt();
                 let relative = square(&mut product.iter().zip(&b).map(|(a, b)| b - a)) / square(&mut b.iter().copied());
                 let mut psi = node_part(&outcome.x, shape);
