@@ -6,6 +6,8 @@ pub mod flux;
 pub mod levels;
 mod patch_zeros;
 pub mod separatrix;
+mod sign_changes;
 pub mod stagnation;
 pub mod turning;
+mod wall_curve;
 pub mod wall_points;
