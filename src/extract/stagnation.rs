@@ -598,6 +598,18 @@ mod tests {
     }
 
     #[test]
+    fn the_result_does_not_depend_on_the_number_of_threads() {
+        let domain = Domain::open(square(65));
+        let with = |threads| {
+            let pool = rayon::ThreadPoolBuilder::new().num_threads(threads).build().unwrap();
+            pool.install(|| search(&domain, |x, y| (40.0 * x).sin() * (37.0 * y + x * x).sin() + (y - 0.5).powi(2)))
+        };
+        let one = with(1);
+        assert!(one.points.len() > 50);
+        assert_eq!(one, with(3));
+    }
+
+    #[test]
     fn notes_name_what_is_near() {
         let grid = square(33);
         let h = 1.0 / 32.0;

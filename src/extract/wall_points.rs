@@ -82,7 +82,7 @@ const AT_VERTEX: f64 = 1e-6;
 /// * Accuracy: positions O(h^3) for smooth flows (quadratic extrapolation over three offsets); a slip side on the nodes uses
 ///   the surface's derivative.
 /// * Bodies known by covered nodes only, and free ones, have no wall to search.  In an axisymmetric flow the axis is searched
-///   like a wall (strength = axial velocity), noted `on_axis`.
+///   like a wall (strength = axial velocity), noted `on_axis`: fluid leaves it at a separation and arrives at an attachment.
 pub fn find_wall_points(
     surface: &PsiSurface,
     domain: &Domain,

@@ -6,7 +6,7 @@
 use std::f64::consts::{PI, TAU};
 
 use isopsi::extract::stagnation::{Boundary, StagnationKind, half_index_sum, index_sum, number_points};
-use isopsi::field::{Body, Domain, Grid, Shape, Side, Surface, Wall, Walls};
+use isopsi::field::{Body, Domain, Grid, Shape, Side, Surface, Thickness, Wall, Walls};
 
 use super::*;
 use StagnationKind::{Attachment, Center, Saddle, Separation};
@@ -235,6 +235,33 @@ fn equal_vortices_in_their_rotating_frame_have_three_saddles_and_two_centers() {
             // the frame turns with the vortices, so fluid outside their orbit goes round the other way
             assert!(center.rate < 0.0);
         }
+    }
+}
+
+#[test] // Hill 1894, radius 1, unit stream: ring at r = 1/sqrt(2), frequency 3/2 / r = 2.12132; poles at +-1 on the axis
+fn hills_vortex_has_its_ring_off_the_axis_and_its_poles_on_it() {
+    let vector = |x: f64, r: f64| {
+        let rho2 = x * x + r * r;
+        if rho2 < 1.0 {
+            (-1.5 * (1.0 - x * x - 2.0 * r * r), -1.5 * x * r)
+        } else {
+            let rho5 = rho2.powf(2.5);
+            (1.0 - (2.0 * x * x - r * r) / (2.0 * rho5), -1.5 * x * r / rho5)
+        }
+    };
+    // psi_rr jumps at the sphere, where the poles lie: first order there
+    for (n, ring, pole) in [(33, 4e-3, 0.1), (65, 1.5e-3, 0.05), (129, 5e-4, 0.025)] {
+        let grid = Grid::new(axis(-2.0, 2.0, 2 * n - 1), axis(0.0, 2.0, n));
+        let fitted = fit_vectors(Domain::open(grid).with_thickness(Thickness::Radius), vector, |_, _| false);
+        let search = fitted.search();
+        assert_eq!((search.points.len(), search.undecided.len()), (1, 0), "{:?}", search.points);
+        let center = expect(&fitted, &search.points, Center, [0.0, 0.5_f64.sqrt()], ring);
+        approx::assert_abs_diff_eq!(center.rate, -1.5 * 2.0_f64.sqrt(), epsilon = ring);
+        let poles = fitted.wall_points();
+        assert_eq!(poles.len(), 2);
+        let front = expect(&fitted, &poles, Separation, [-1.0, 0.0], pole);
+        let rear = expect(&fitted, &poles, Attachment, [1.0, 0.0], pole);
+        assert!(front.notes.contains(&"on_axis") && rear.notes.contains(&"on_axis"));
     }
 }
 
