@@ -112,7 +112,8 @@ impl Level {
         Self { ny, nx, east, north, inverse, ties, regular }
     }
 
-    /// Blocks of 2 x 2 nodes become one; edges between blocks add up, halved since the step doubles while the width does too.
+    /// Blocks of 2 x 2 nodes become one; edges between blocks add up, halved since the step doubles while the width does too.  Ties
+    /// add up without halving: a body stays closer to a coarse node than a coarse step (measured: 14 instead of 21 iterations).
     fn coarser(&self, extras: usize) -> Self {
         let (ny, nx) = (self.ny.div_ceil(2), self.nx.div_ceil(2));
         let (mut east, mut north) = (vec![0.0f32; ny * nx], vec![0.0f32; ny * nx]);
@@ -131,7 +132,7 @@ impl Level {
         let mut merged = BTreeMap::new();
         for &(k, e, w) in &self.ties {
             let (j, i) = (k as usize / self.nx, k as usize % self.nx);
-            *merged.entry(((j / 2 * nx + i / 2) as u32, e)).or_insert(0.0) += 0.5 * w;
+            *merged.entry(((j / 2 * nx + i / 2) as u32, e)).or_insert(0.0) += w;
         }
         let ties = merged.into_iter().map(|((k, e), w)| (k, e, w)).collect();
         Self::finish(ny, nx, east, north, ties, extras)
