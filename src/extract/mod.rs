@@ -8,6 +8,7 @@ mod patch_zeros;
 pub mod separatrix;
 mod sign_changes;
 pub mod stagnation;
+pub mod trace;
 pub mod turning;
 mod wall_curve;
 pub mod wall_points;

@@ -3,6 +3,7 @@
 mod cholesky;
 mod dct;
 pub mod divergence;
+pub mod extend;
 pub mod fill;
 pub mod flux;
 pub mod graph;
