@@ -124,7 +124,8 @@ impl<'a> Walker<'a> {
             let back = [start[0] - p[0], start[1] - p[1]];
             let gap = back[0].hypot(back[1]);
             left_start |= travelled > 3.0 * gap.max(1e-3 * self.h) || travelled > 4.0 * self.h;
-            if left_start && line.len() > 3 && gap <= 1.2 * length && back[0] * tangent[0] + back[1] * tangent[1] > 0.0 {
+            if left_start && line.len() > 3 && gap <= 1.2 * length && back[0] * tangent[0] + back[1] * tangent[1] > 0.0
+            {
                 let middle = [p[0] + 0.5 * back[0], p[1] + 0.5 * back[1]];
                 if self.eval(middle).is_some_and(|m| (m.psi - level).abs() <= 1.5 * self.tolerance * m.speed()) {
                     return (line, End::Closed);
@@ -166,7 +167,14 @@ impl<'a> Walker<'a> {
     }
 
     /// `Ok(None)`: not accurate enough; `Err`: outside the cells.
-    fn try_step(&mut self, p: [f64; 2], tangent: [f64; 2], length: f64, level: f64, sense: f64) -> Result<Option<([f64; 2], Jet)>, ()> {
+    fn try_step(
+        &mut self,
+        p: [f64; 2],
+        tangent: [f64; 2],
+        length: f64,
+        level: f64,
+        sense: f64,
+    ) -> Result<Option<([f64; 2], Jet)>, ()> {
         let half = [p[0] + 0.5 * length * tangent[0], p[1] + 0.5 * length * tangent[1]];
         let jet = self.eval(half).ok_or(())?;
         let speed = jet.speed();

@@ -71,7 +71,13 @@ pub fn extended_surface(domain: &Domain, psi: &Array2<f64>, body_psi: &[f64], wa
         let inner = ((j - pad_low.0.min(j)).min(ny - 1), (i - pad_low.1.min(i)).min(nx - 1));
         match on.into_iter().flatten().next() {
             // A wall node beside a gap carries nothing.
-            Some(s) => if values[inner].is_finite() || domain.is_solid(inner.0, inner.1) { wall_psi[s] } else { f64::NAN },
+            Some(s) => {
+                if values[inner].is_finite() || domain.is_solid(inner.0, inner.1) {
+                    wall_psi[s]
+                } else {
+                    f64::NAN
+                }
+            }
             None => values[inner],
         }
     });
