@@ -16,7 +16,7 @@ const TOO_NEAR: f64 = 0.3;
 ///   psi of the body on its outline and two fluid nodes; no-slip, `psi_b + a s^2 + b s^3` through two fluid nodes.  What lies inside
 ///   the outline has no meaning of its own and is never reported.
 /// * Bodies known by their nodes only, and free ones, stay holes.
-/// * Accuracy: O(h^3) at the surface.
+/// * Accuracy: psi on the outline is off by about one hundredth of speed times spacing, between second and third order.
 pub fn extended_surface(domain: &Domain, psi: &Array2<f64>, body_psi: &[f64], wall_psi: &[f64; 4]) -> PsiSurface {
     let mut values = psi.clone();
     for (body, &level) in body_psi.iter().enumerate() {
@@ -171,7 +171,7 @@ mod tests {
     use crate::field::{Body, Wall, Walls};
 
     #[test] // potential flow past a cylinder (Milne-Thomson): psi vanishes on r = a
-    fn psi_vanishes_on_a_tied_cylinder_at_third_order() {
+    fn psi_vanishes_on_a_tied_cylinder_to_better_than_first_order() {
         let error = |n: usize| {
             let axis = Axis::uniform(-1.0, 2.0 / (n - 1) as f64, n).unwrap();
             let a = 0.37;
@@ -190,7 +190,7 @@ mod tests {
                 .fold(0.0, f64::max)
         };
         let (coarse, fine) = (error(41), error(81));
-        assert!(fine < 2e-3 && coarse / fine > 3.5, "{coarse:.2e} {fine:.2e}");
+        assert!(fine < 4e-4 && coarse / fine > 2.8, "{coarse:.2e} {fine:.2e}");
     }
 
     #[test]
