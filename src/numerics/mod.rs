@@ -1,5 +1,6 @@
 //! Layer 2, field -> field: screening, edge fluxes, fit of psi, surface, divergence.  May use: field.
 
+pub mod box_test;
 mod cholesky;
 mod dct;
 pub mod divergence;
@@ -10,6 +11,7 @@ pub mod graph;
 pub mod helmholtz;
 mod multigrid;
 pub mod noise;
+mod outflow;
 pub mod screening;
 pub mod solver;
 pub mod stream_function;
