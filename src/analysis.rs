@@ -1,1 +1,312 @@
 //! Layer 4, the whole job on one frame: screen, fit, check, extract.  May use: field, numerics, extract.
+
+use std::sync::Arc;
+
+use ndarray::{Array2, Zip};
+
+use crate::extract::cells::{Cell, CellOptions, find_cells};
+use crate::extract::contour::{Contour, TraceOptions, trace_contours, wall_contours};
+use crate::extract::levels::{LevelChoice, choose_levels};
+use crate::extract::separatrix::trace_separatrices;
+use crate::extract::stagnation::{
+    StagnationKind, StagnationOptions, StagnationPoint, find_stagnation_points, number_points,
+};
+use crate::extract::turning::{Turning, turning_number};
+use crate::extract::wall_points::{WallPointOptions, find_wall_points};
+use crate::field::{FieldError, Flags, Remark, RemarkKind, Thickness, VelocityField};
+use crate::numerics::box_test::{BoxTestOptions, DivergenceReport, Verdict, check_divergence};
+use crate::numerics::divergence::{DivergenceMap, divergence_map};
+use crate::numerics::fill::fill_gaps;
+use crate::numerics::helmholtz::{ResidualShare, residual_share};
+use crate::numerics::screening::{ScreenOptions, screen_by_fit, screen_by_median};
+use crate::numerics::solver::StopReason;
+use crate::numerics::stream_function::{FitError, FitOptions, StreamFit, solve_stream_function};
+use crate::numerics::surface::PsiSurface;
+
+/// Settings of an analysis.
+#[derive(Debug, Clone, Default)]
+pub struct AnalysisOptions {
+    /// Screening; `None` takes every vector as it is.
+    pub screen: Option<ScreenOptions>,
+    /// Fit of psi.
+    pub fit: FitOptions,
+    /// Box test.
+    pub boxes: BoxTestOptions,
+    /// Interior stagnation points.
+    pub stagnation: StagnationOptions,
+    /// Attachment and separation points.
+    pub wall_points: WallPointOptions,
+    /// Which streamlines.
+    pub levels: LevelChoice,
+    /// How they are traced.
+    pub trace: TraceOptions,
+    /// Recirculation cells.
+    pub cells: CellOptions,
+}
+
+/// Why a frame could not be analyzed.
+#[derive(Debug, Clone, PartialEq, thiserror::Error)]
+#[non_exhaustive]
+pub enum AnalysisError {
+    /// The field itself is unusable: every reason.
+    #[error("the field cannot be analyzed: {}", .0.iter().map(ToString::to_string).collect::<Vec<_>>().join("; "))]
+    Field(Vec<FieldError>),
+    /// No stream function.
+    #[error(transparent)]
+    Fit(#[from] FitError),
+}
+
+/// Stages reported to an observer, in order.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Stage {
+    /// Comparison of every vector with its neighbors and with the fit.
+    Screening,
+    /// Fit of psi.
+    Fit,
+    /// Divergence map, box test, residual share.
+    Divergence,
+    /// Stagnation points, wall points.
+    Points,
+    /// Streamlines, separatrices, cells.
+    Lines,
+}
+
+impl Stage {
+    /// Name in summaries.
+    pub fn name(self) -> &'static str {
+        match self {
+            Stage::Screening => "screening",
+            Stage::Fit => "fit",
+            Stage::Divergence => "divergence",
+            Stage::Points => "points",
+            Stage::Lines => "lines",
+        }
+    }
+}
+
+/// Called when a stage ends; the library itself reads no clock.
+pub type Observer<'a> = &'a (dyn Fn(Stage) + Sync);
+
+/// A screened and fitted frame.
+#[derive(Debug, Clone)]
+pub struct FittedFlow {
+    /// The field as measured.
+    pub measured: VelocityField,
+    /// The field that was fitted: screened vectors are gaps.
+    pub used: VelocityField,
+    /// What every node is, shape `(ny, nx)`.
+    pub flags: Array2<Flags>,
+    /// The fit, psi on fitted nodes only.
+    pub fit: StreamFit,
+    /// Surface through fitted and filled psi.
+    pub surface: PsiSurface,
+    /// Fitted u, NaN where there is no psi; shape `(ny, nx)`.
+    pub u_fit: Array2<f64>,
+    /// Fitted v.
+    pub v_fit: Array2<f64>,
+    /// Remarks of these stages.
+    pub remarks: Vec<Remark>,
+}
+
+/// The incompressibility check of a fitted frame.
+#[derive(Debug, Clone)]
+pub struct Check {
+    /// Divergence, its sigma and vorticity at the nodes.
+    pub map: DivergenceMap,
+    /// Box test and verdict.
+    pub report: DivergenceReport,
+    /// Share of the flux energy that no stream function explains.
+    pub residual: ResidualShare,
+    /// Remarks of this stage.
+    pub remarks: Vec<Remark>,
+}
+
+/// Points, lines and cells of a fitted frame.
+#[derive(Debug, Clone)]
+pub struct Features {
+    /// Stagnation points in table order.
+    pub points: Vec<StagnationPoint>,
+    /// Sum of the indices of the interior points.
+    pub index_sum: i64,
+    /// Turning number of the velocity on the rim.
+    pub turning: Turning,
+    /// Levels drawn.
+    pub levels: Vec<f64>,
+    /// Streamlines, separatrices, walls.
+    pub lines: Vec<Contour>,
+    /// Recirculation cells.
+    pub cells: Vec<Cell>,
+    /// Remarks of these stages.
+    pub remarks: Vec<Remark>,
+}
+
+/// Everything isopsi finds in one frame.
+#[derive(Debug, Clone)]
+pub struct Analysis {
+    /// Screened and fitted frame.
+    pub flow: FittedFlow,
+    /// Incompressibility check.
+    pub check: Check,
+    /// Points, lines, cells.
+    pub features: Features,
+}
+
+impl Analysis {
+    /// Screens, fits, checks and extracts.
+    ///
+    /// # Errors
+    /// [`AnalysisError`] when the field is unusable or has no stream function.
+    pub fn run(field: &VelocityField, options: &AnalysisOptions, observer: Observer<'_>) -> Result<Self, AnalysisError> {
+        let flow = fit_flow(field, options, observer)?;
+        let check = check_flow(&flow, options, observer);
+        let features = find_features(&flow, options, observer);
+        Ok(Self { flow, check, features })
+    }
+
+    /// Remarks of all stages.
+    pub fn remarks(&self) -> impl Iterator<Item = &Remark> {
+        self.flow.remarks.iter().chain(&self.check.remarks).chain(&self.features.remarks)
+    }
+
+    /// The verdict.
+    pub fn verdict(&self) -> Verdict {
+        self.check.report.verdict
+    }
+}
+
+/// Screens the vectors, fits psi, screens against the fit, fits again, fills narrow gaps.
+///
+/// # Errors
+/// [`AnalysisError`] when the field is unusable or has no stream function.
+pub fn fit_flow(field: &VelocityField, options: &AnalysisOptions, observer: Observer<'_>) -> Result<FittedFlow, AnalysisError> {
+    let problems = field.problems();
+    if !problems.is_empty() {
+        return Err(AnalysisError::Field(problems));
+    }
+    let mut remarks = Vec::new();
+    let mut used = field.clone();
+    if let Some(screen) = &options.screen {
+        let median = screen_by_median(&used, screen);
+        used = used.without(|j, i| median.rejected[[j, i]]);
+        remarks.extend(median.remarks);
+        observer(Stage::Screening);
+    }
+    let mut fit = solve_stream_function(&used, &options.fit)?;
+    if let Some(screen) = &options.screen {
+        for _ in 0..screen.passes {
+            let surface = PsiSurface::new(used.grid(), &fit.psi);
+            let (u_fit, v_fit) = fitted_velocity(&used, &surface);
+            let against = screen_by_fit(&used, &u_fit, &v_fit, screen);
+            remarks.extend(against.remarks);
+            if !against.rejected.iter().any(|r| *r) {
+                break;
+            }
+            used = used.without(|j, i| against.rejected[[j, i]]);
+            fit = solve_stream_function(&used, &options.fit)?;
+        }
+    }
+    let filled = fill_gaps(&used.domain, &fit.psi, &fit.component);
+    let surface = PsiSurface::new(used.grid(), &filled.psi);
+    let (u_fit, v_fit) = fitted_velocity(&used, &surface);
+    let mut flags = filled.flags;
+    Zip::indexed(&mut flags).for_each(|(j, i), flag| {
+        if field.domain.is_solid(j, i) {
+            *flag = flag.with(Flags::SOLID);
+        }
+        if field.valid[[j, i]] {
+            *flag = flag.with(Flags::MEASURED);
+            if !used.valid[[j, i]] {
+                *flag = flag.with(Flags::SCREENED);
+            }
+        }
+    });
+    if fit.components > 1 {
+        remarks.push(Remark::new(
+            RemarkKind::SeveralComponents,
+            format!(
+                "the vectors fall into {} separate parts; psi differences between parts are unknown, each part has its own zero",
+                fit.components
+            ),
+        ));
+    }
+    if fit.solve.reason == StopReason::IterationLimit {
+        remarks.push(Remark::new(
+            RemarkKind::NotConverged,
+            format!(
+                "the solver stopped after {} iterations at a relative residual of {:.1e}, above the tolerance {:.1e}",
+                fit.solve.iterations, fit.solve.relative_residual, fit.solve.tolerance
+            ),
+        ));
+    }
+    observer(Stage::Fit);
+    Ok(FittedFlow { measured: field.clone(), used, flags, fit, surface, u_fit, v_fit, remarks })
+}
+
+/// Velocity of the surface at the nodes, divided by the thickness; NaN where there is no psi or the thickness is not positive.
+fn fitted_velocity(field: &VelocityField, surface: &PsiSurface) -> (Array2<f64>, Array2<f64>) {
+    let domain = &field.domain;
+    let (mut u, mut v) = (surface.psi_y().clone(), surface.psi_x().mapv(|p| -p));
+    if domain.thickness != Thickness::Uniform {
+        Zip::indexed(&mut u).and(&mut v).for_each(|(j, i), u, v| {
+            let h = domain.thickness.at_node(&domain.grid, j, i);
+            let inverse = if h > 0.0 { 1.0 / h } else { f64::NAN };
+            *u *= inverse;
+            *v *= inverse;
+        });
+    }
+    (u, v)
+}
+
+/// Divergence map, box test with verdict, residual share.
+pub fn check_flow(flow: &FittedFlow, options: &AnalysisOptions, observer: Observer<'_>) -> Check {
+    let map = divergence_map(&flow.used);
+    let report = check_divergence(&flow.used, &flow.fit, &options.boxes);
+    let residual = residual_share(&flow.fit.residual, flow.used.overlap.unwrap_or(0.0));
+    let remarks = report.remarks.clone();
+    observer(Stage::Divergence);
+    Check { map, report, residual, remarks }
+}
+
+/// Stagnation points, streamlines, separatrices, recirculation cells.
+pub fn find_features(flow: &FittedFlow, options: &AnalysisOptions, observer: Observer<'_>) -> Features {
+    let domain = &flow.used.domain;
+    let surface = &flow.surface;
+    let (body_psi, wall_psi) = (&flow.fit.body_psi, &flow.fit.wall_psi);
+    let mut remarks = Vec::new();
+    let search = find_stagnation_points(surface, domain, &options.stagnation);
+    if !search.undecided.is_empty() {
+        remarks.push(Remark::new(
+            RemarkKind::Undecided,
+            format!(
+                "in {} cells it could not be decided whether there is a stagnation point (the velocity vanishes along a line or over an area)",
+                search.undecided.len()
+            ),
+        ));
+    }
+    let index_sum = search.points.iter().map(|p| i64::from(p.index)).sum();
+    let turning = turning_number(surface);
+    let mut points = search.points;
+    points.extend(find_wall_points(surface, domain, body_psi, wall_psi, &options.wall_points));
+    let mut points = number_points(points);
+    note_filled(&mut points, flow);
+    observer(Stage::Points);
+    let levels = choose_levels(surface, &options.levels, wall_psi, body_psi);
+    let centers: Vec<StagnationPoint> = points.iter().filter(|p| p.kind == StagnationKind::Center).cloned().collect();
+    let mut lines = trace_contours(surface, &levels, &centers, &flow.flags, domain, &options.trace);
+    lines.extend(trace_separatrices(surface, &points, domain, &flow.flags, body_psi, wall_psi, &options.trace));
+    lines.extend(wall_contours(domain, body_psi, wall_psi));
+    let cells = find_cells(surface, &points, domain, body_psi, wall_psi, &options.cells);
+    observer(Stage::Lines);
+    Features { points, index_sum, turning, levels, lines, cells, remarks }
+}
+
+/// Marks points in cells with a filled corner.
+fn note_filled(points: &mut [StagnationPoint], flow: &FittedFlow) {
+    for point in points {
+        let Some((j, i, _, _)) = flow.surface.locate(point.x, point.y) else { continue };
+        let corners = [(j, i), (j, i + 1), (j + 1, i), (j + 1, i + 1)];
+        if corners.iter().any(|&node| flow.flags[node].has(Flags::FILLED)) {
+            point.notes.push("in_filled");
+        }
+    }
+}

@@ -1,1 +1,9 @@
-fn main() {}
+//! Command line of isopsi.
+
+mod cli;
+
+use std::process::ExitCode;
+
+fn main() -> ExitCode {
+    cli::run()
+}
