@@ -2,14 +2,19 @@
 
 mod assemble;
 pub mod error;
+pub mod field_file;
 mod geometry;
 mod inputs;
+#[cfg(feature = "hdf5")]
+mod netcdf;
 mod npy;
+pub mod output;
 mod quantity;
 pub mod raw;
 mod read;
 pub mod request;
 pub mod survey;
+pub mod table;
 mod text;
 
 pub use error::{Blame, IoError};
