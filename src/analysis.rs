@@ -1,24 +1,23 @@
 //! Layer 4, the whole job on one frame: screen, fit, check, extract.  May use: field, numerics, extract.
 
-use std::sync::Arc;
-
 use ndarray::{Array2, Zip};
 
 use crate::extract::cells::{Cell, CellOptions, find_cells};
-use crate::extract::contour::{Contour, TraceOptions, trace_contours, wall_contours};
+use crate::extract::contour::{Contour, Scene, TraceOptions, trace_contours, wall_contours};
 use crate::extract::levels::{LevelChoice, choose_levels};
 use crate::extract::separatrix::trace_separatrices;
 use crate::extract::stagnation::{
-    StagnationKind, StagnationOptions, StagnationPoint, find_stagnation_points, number_points,
+    StagnationKind, StagnationOptions, StagnationPoint, find_stagnation_points, index_sum, number_points,
 };
 use crate::extract::turning::{Turning, turning_number};
 use crate::extract::wall_points::{WallPointOptions, find_wall_points};
 use crate::field::{FieldError, Flags, Remark, RemarkKind, Thickness, VelocityField};
-use crate::numerics::box_test::{BoxTestOptions, DivergenceReport, Verdict, check_divergence};
-use crate::numerics::divergence::{DivergenceMap, divergence_map};
+use crate::numerics::box_test::{DivergenceOptions, DivergenceReport, Verdict, check_divergence};
+use crate::numerics::divergence::{GradientMaps, gradient_maps};
+use crate::numerics::extend::extended_surface;
 use crate::numerics::fill::fill_gaps;
 use crate::numerics::helmholtz::{ResidualShare, residual_share};
-use crate::numerics::screening::{ScreenOptions, screen_by_fit, screen_by_median};
+use crate::numerics::screening::{ScreenOptions, screen};
 use crate::numerics::solver::StopReason;
 use crate::numerics::stream_function::{FitError, FitOptions, StreamFit, solve_stream_function};
 use crate::numerics::surface::PsiSurface;
@@ -31,7 +30,7 @@ pub struct AnalysisOptions {
     /// Fit of psi.
     pub fit: FitOptions,
     /// Box test.
-    pub boxes: BoxTestOptions,
+    pub boxes: DivergenceOptions,
     /// Interior stagnation points.
     pub stagnation: StagnationOptions,
     /// Attachment and separation points.
@@ -98,8 +97,10 @@ pub struct FittedFlow {
     pub flags: Array2<Flags>,
     /// The fit, psi on fitted nodes only.
     pub fit: StreamFit,
-    /// Surface through fitted and filled psi.
+    /// Surface through fitted and filled psi at the nodes.
     pub surface: PsiSurface,
+    /// The same surface carried on to walls and bodies: what lines and fluxes are read from.
+    pub extended: PsiSurface,
     /// Fitted u, NaN where there is no psi; shape `(ny, nx)`.
     pub u_fit: Array2<f64>,
     /// Fitted v.
@@ -108,11 +109,18 @@ pub struct FittedFlow {
     pub remarks: Vec<Remark>,
 }
 
+impl FittedFlow {
+    /// psi at the nodes, narrow gaps filled; NaN where there is none.
+    pub fn surface_psi(&self) -> &Array2<f64> {
+        self.surface.psi()
+    }
+}
+
 /// The incompressibility check of a fitted frame.
 #[derive(Debug, Clone)]
 pub struct Check {
     /// Divergence, its sigma and vorticity at the nodes.
-    pub map: DivergenceMap,
+    pub map: GradientMaps,
     /// Box test and verdict.
     pub report: DivergenceReport,
     /// Share of the flux energy that no stream function explains.
@@ -127,7 +135,7 @@ pub struct Features {
     /// Stagnation points in table order.
     pub points: Vec<StagnationPoint>,
     /// Sum of the indices of the interior points.
-    pub index_sum: i64,
+    pub index_sum: i32,
     /// Turning number of the velocity on the rim.
     pub turning: Turning,
     /// Levels drawn.
@@ -156,14 +164,18 @@ impl Analysis {
     ///
     /// # Errors
     /// [`AnalysisError`] when the field is unusable or has no stream function.
-    pub fn run(field: &VelocityField, options: &AnalysisOptions, observer: Observer<'_>) -> Result<Self, AnalysisError> {
+    pub fn run(
+        field: &VelocityField,
+        options: &AnalysisOptions,
+        observer: Observer<'_>,
+    ) -> Result<Self, AnalysisError> {
         let flow = fit_flow(field, options, observer)?;
         let check = check_flow(&flow, options, observer);
         let features = find_features(&flow, options, observer);
         Ok(Self { flow, check, features })
     }
 
-    /// Remarks of all stages.
+    /// Remarks of all stages, in order.
     pub fn remarks(&self) -> impl Iterator<Item = &Remark> {
         self.flow.remarks.iter().chain(&self.check.remarks).chain(&self.features.remarks)
     }
@@ -178,35 +190,24 @@ impl Analysis {
 ///
 /// # Errors
 /// [`AnalysisError`] when the field is unusable or has no stream function.
-pub fn fit_flow(field: &VelocityField, options: &AnalysisOptions, observer: Observer<'_>) -> Result<FittedFlow, AnalysisError> {
+pub fn fit_flow(
+    field: &VelocityField,
+    options: &AnalysisOptions,
+    observer: Observer<'_>,
+) -> Result<FittedFlow, AnalysisError> {
     let problems = field.problems();
     if !problems.is_empty() {
         return Err(AnalysisError::Field(problems));
     }
     let mut remarks = Vec::new();
-    let mut used = field.clone();
-    if let Some(screen) = &options.screen {
-        let median = screen_by_median(&used, screen);
-        used = used.without(|j, i| median.rejected[[j, i]]);
-        remarks.extend(median.remarks);
-        observer(Stage::Screening);
-    }
-    let mut fit = solve_stream_function(&used, &options.fit)?;
-    if let Some(screen) = &options.screen {
-        for _ in 0..screen.passes {
-            let surface = PsiSurface::new(used.grid(), &fit.psi);
-            let (u_fit, v_fit) = fitted_velocity(&used, &surface);
-            let against = screen_by_fit(&used, &u_fit, &v_fit, screen);
-            remarks.extend(against.remarks);
-            if !against.rejected.iter().any(|r| *r) {
-                break;
-            }
-            used = used.without(|j, i| against.rejected[[j, i]]);
-            fit = solve_stream_function(&used, &options.fit)?;
-        }
-    }
+    let (used, fit) = match &options.screen {
+        None => (field.clone(), solve_stream_function(field, &options.fit)?),
+        Some(screening) => screened(field, screening, &options.fit, &mut remarks)?,
+    };
+    observer(Stage::Screening);
     let filled = fill_gaps(&used.domain, &fit.psi, &fit.component);
     let surface = PsiSurface::new(used.grid(), &filled.psi);
+    let extended = extended_surface(&used.domain, &filled.psi, &fit.body_psi, &fit.wall_psi);
     let (u_fit, v_fit) = fitted_velocity(&used, &surface);
     let mut flags = filled.flags;
     Zip::indexed(&mut flags).for_each(|(j, i), flag| {
@@ -239,7 +240,41 @@ pub fn fit_flow(field: &VelocityField, options: &AnalysisOptions, observer: Obse
         ));
     }
     observer(Stage::Fit);
-    Ok(FittedFlow { measured: field.clone(), used, flags, fit, surface, u_fit, v_fit, remarks })
+    Ok(FittedFlow { measured: field.clone(), used, flags, fit, surface, extended, u_fit, v_fit, remarks })
+}
+
+/// Screens by medians and against the fit; the last fit is kept when nothing more was rejected.
+fn screened(
+    field: &VelocityField,
+    screening: &ScreenOptions,
+    options: &FitOptions,
+    remarks: &mut Vec<Remark>,
+) -> Result<(VelocityField, StreamFit), AnalysisError> {
+    let mut last: Option<(Array2<bool>, StreamFit)> = None;
+    let found = screen(field, screening, |kept| {
+        let fit = solve_stream_function(kept, options).ok()?;
+        let filled = fill_gaps(&kept.domain, &fit.psi, &fit.component);
+        let velocity = fitted_velocity(kept, &PsiSurface::new(kept.grid(), &filled.psi));
+        last = Some((kept.valid.clone(), fit));
+        Some(velocity)
+    });
+    if found.limited {
+        remarks.push(Remark::new(
+            RemarkKind::Note,
+            format!(
+                "screening stopped at {} vectors, the largest share it may remove: so many cannot all be outliers; check sigma, units and axes",
+                found.count()
+            ),
+        ));
+    }
+    let used = found.apply(field);
+    match last {
+        Some((valid, fit)) if valid == used.valid => Ok((used, fit)),
+        _ => {
+            let fit = solve_stream_function(&used, options)?;
+            Ok((used, fit))
+        }
+    }
 }
 
 /// Velocity of the surface at the nodes, divided by the thickness; NaN where there is no psi or the thickness is not positive.
@@ -259,43 +294,73 @@ fn fitted_velocity(field: &VelocityField, surface: &PsiSurface) -> (Array2<f64>,
 
 /// Divergence map, box test with verdict, residual share.
 pub fn check_flow(flow: &FittedFlow, options: &AnalysisOptions, observer: Observer<'_>) -> Check {
-    let map = divergence_map(&flow.used);
-    let report = check_divergence(&flow.used, &flow.fit, &options.boxes);
-    let residual = residual_share(&flow.fit.residual, flow.used.overlap.unwrap_or(0.0));
-    let remarks = report.remarks.clone();
+    let report = check_divergence(&flow.used, &options.boxes);
+    let map = gradient_maps(&flow.used, report.overlap);
+    let residual = residual_share(&flow.used, &flow.fit.residual, report.overlap);
+    let mut remarks = Vec::new();
+    if flow.used.overlap.is_none() {
+        remarks.push(Remark::new(
+            RemarkKind::OverlapMissing,
+            format!(
+                "no overlap is declared; {} is used (`--overlap 0.5` when neighboring windows share half their width)",
+                report.overlap
+            ),
+        ));
+    }
+    if let (Some(declared), Some(estimated)) = (report.sigma_declared, report.sigma_estimated)
+        && !estimated.upper_bound
+        && (declared - estimated.sigma).abs() > SIGMA_DISAGREES * estimated.uncertainty.max(0.05 * declared)
+    {
+        remarks.push(Remark::new(
+            RemarkKind::SigmaDisagrees,
+            format!(
+                "sigma is declared as {declared:.4}, the smallest boxes say {:.4} +- {:.4}: the declared value is too {} or the flow is divergent on the scale of the nodes",
+                estimated.sigma,
+                estimated.uncertainty,
+                if declared < estimated.sigma { "small" } else { "large" }
+            ),
+        ));
+    }
     observer(Stage::Divergence);
     Check { map, report, residual, remarks }
 }
 
+/// Declared and estimated sigma disagree when they differ by more than this many uncertainties of the estimate.
+pub const SIGMA_DISAGREES: f64 = 3.0;
+
+/// Noise of psi one spacing off a wall against psi on it, in units of sigma times spacing, for the fit without smoothing.
+const WALL_NOISE: f64 = 0.6;
+
 /// Stagnation points, streamlines, separatrices, recirculation cells.
 pub fn find_features(flow: &FittedFlow, options: &AnalysisOptions, observer: Observer<'_>) -> Features {
     let domain = &flow.used.domain;
-    let surface = &flow.surface;
     let (body_psi, wall_psi) = (&flow.fit.body_psi, &flow.fit.wall_psi);
     let mut remarks = Vec::new();
-    let search = find_stagnation_points(surface, domain, &options.stagnation);
-    if !search.undecided.is_empty() {
-        remarks.push(Remark::new(
-            RemarkKind::Undecided,
-            format!(
-                "in {} cells it could not be decided whether there is a stagnation point (the velocity vanishes along a line or over an area)",
-                search.undecided.len()
-            ),
-        ));
-    }
-    let index_sum = search.points.iter().map(|p| i64::from(p.index)).sum();
-    let turning = turning_number(surface);
+    let search = find_stagnation_points(&flow.surface, domain, &options.stagnation);
+    remarks.extend(search.remark());
+    let index_sum = index_sum(&search.points);
+    let turning = turning_number(&flow.surface, domain, &options.stagnation);
     let mut points = search.points;
-    points.extend(find_wall_points(surface, domain, body_psi, wall_psi, &options.wall_points));
+    let mut wall_options = options.wall_points.clone();
+    if wall_options.psi_noise == 0.0
+        && let Some(sigma) = flow.used.sigma.rms(&flow.used.valid)
+    {
+        let width = 1.0 / (1.0 - flow.used.overlap.unwrap_or(0.0));
+        wall_options.psi_noise = WALL_NOISE * sigma * flow.used.grid().spacing() * width.sqrt();
+    }
+    points.extend(find_wall_points(&flow.surface, domain, body_psi, wall_psi, &wall_options));
     let mut points = number_points(points);
     note_filled(&mut points, flow);
     observer(Stage::Points);
-    let levels = choose_levels(surface, &options.levels, wall_psi, body_psi);
-    let centers: Vec<StagnationPoint> = points.iter().filter(|p| p.kind == StagnationKind::Center).cloned().collect();
-    let mut lines = trace_contours(surface, &levels, &centers, &flow.flags, domain, &options.trace);
-    lines.extend(trace_separatrices(surface, &points, domain, &flow.flags, body_psi, wall_psi, &options.trace));
-    lines.extend(wall_contours(domain, body_psi, wall_psi));
-    let cells = find_cells(surface, &points, domain, body_psi, wall_psi, &options.cells);
+    let scene = Scene { surface: &flow.extended, domain, flags: &flow.flags };
+    let solid_psi: Vec<f64> = body_psi.iter().chain(wall_psi).copied().collect();
+    let levels = choose_levels(&flow.extended, &options.levels, &solid_psi);
+    let centers: Vec<[f64; 2]> =
+        points.iter().filter(|p| p.kind == StagnationKind::Center).map(|p| [p.x, p.y]).collect();
+    let mut lines = trace_contours(&scene, &levels, &centers, &options.trace);
+    lines.extend(trace_separatrices(&scene, &points, &options.trace));
+    lines.extend(wall_contours(&scene, body_psi, wall_psi));
+    let cells = find_cells(&scene, &points, body_psi, wall_psi, &options.cells);
     observer(Stage::Lines);
     Features { points, index_sum, turning, levels, lines, cells, remarks }
 }

@@ -76,7 +76,12 @@ pub fn flux(job: &Job<'_>, from: [f64; 2], to: [f64; 2]) -> Result<(), Failure> 
         sign * flux.psi_to
     );
     match &flux.by_line {
-        Ok(value) => text += &format!("  along the straight line, from the vectors: {value:.6} {unit} (difference {:.2e})\n", value - flux.by_psi),
+        Ok(value) => {
+            text += &format!(
+                "  along the straight line, from the vectors: {value:.6} {unit} (difference {:.2e})\n",
+                value - flux.by_psi
+            )
+        }
         Err(reason) => text += &format!("  along the straight line: not formed, {reason}\n"),
     }
     if let Some(whole) = flux.around_axis {

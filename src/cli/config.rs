@@ -22,7 +22,9 @@ fn number_or_text(text: &String) -> NumberOrText {
 fn numbers(text: &str, flag: &str) -> Result<Vec<f64>, IoError> {
     text.split(',')
         .map(|t| {
-            t.trim().parse::<f64>().map_err(|_| IoError::setting(flag, format!("`{text}`: `{}` is not a number", t.trim())))
+            t.trim()
+                .parse::<f64>()
+                .map_err(|_| IoError::setting(flag, format!("`{text}`: `{}` is not a number", t.trim())))
         })
         .collect()
 }
@@ -47,9 +49,9 @@ pub fn survey_of(common: &Common) -> Result<Survey, IoError> {
     if !common.array.is_empty() {
         let mut arrays = BTreeMap::new();
         for text in &common.array {
-            let (role, path) = text
-                .split_once('=')
-                .ok_or_else(|| IoError::setting("--array", format!("`{text}`; write ROLE=PATH, for example u=/run3/vx")))?;
+            let (role, path) = text.split_once('=').ok_or_else(|| {
+                IoError::setting("--array", format!("`{text}`; write ROLE=PATH, for example u=/run3/vx"))
+            })?;
             arrays.insert(role.trim().to_owned(), path.trim().to_owned());
         }
         s.data.arrays = Some(arrays);
@@ -75,15 +77,17 @@ pub fn survey_of(common: &Common) -> Result<Survey, IoError> {
         s.solid.push(solid(text)?);
     }
     for text in &common.wall {
-        let (side, kind) = text
-            .split_once('=')
-            .ok_or_else(|| IoError::setting("--wall", format!("`{text}`; write SIDE=SURFACE, for example bottom=no-slip")))?;
+        let (side, kind) = text.split_once('=').ok_or_else(|| {
+            IoError::setting("--wall", format!("`{text}`; write SIDE=SURFACE, for example bottom=no-slip"))
+        })?;
         let slot = match side.trim() {
             "bottom" => &mut s.walls.bottom,
             "top" => &mut s.walls.top,
             "left" => &mut s.walls.left,
             "right" => &mut s.walls.right,
-            other => return Err(IoError::setting("--wall", format!("side `{other}`; write bottom, top, left or right"))),
+            other => {
+                return Err(IoError::setting("--wall", format!("side `{other}`; write bottom, top, left or right")));
+            }
         };
         *slot = Some(kind.trim().to_owned());
     }
@@ -120,7 +124,9 @@ fn solid(text: &str) -> Result<SolidTable, IoError> {
     let bad = || {
         IoError::setting(
             "--solid",
-            format!("`{text}`; write \"circle X,Y,R\", \"polygon X,Y X,Y X,Y\" or \"mask FILE\", then slip, no-slip or free"),
+            format!(
+                "`{text}`; write \"circle X,Y,R\", \"polygon X,Y X,Y X,Y\" or \"mask FILE\", then slip, no-slip or free"
+            ),
         )
     };
     let mut words: Vec<&str> = text.split_whitespace().collect();
@@ -150,7 +156,9 @@ fn solid(text: &str) -> Result<SolidTable, IoError> {
 pub fn options_of(survey: &Survey) -> Result<AnalysisOptions, IoError> {
     let mut options = AnalysisOptions::default();
     let positive = |value: Option<f64>, place: &str| match value {
-        Some(v) if !(v > 0.0 && v.is_finite()) => Err(IoError::setting(place, format!("{v}; expected a positive number"))),
+        Some(v) if !(v > 0.0 && v.is_finite()) => {
+            Err(IoError::setting(place, format!("{v}; expected a positive number")))
+        }
         other => Ok(other),
     };
     let mut screen = ScreenOptions::default();
@@ -158,7 +166,7 @@ pub fn options_of(survey: &Survey) -> Result<AnalysisOptions, IoError> {
         screen.limit = limit;
     }
     if let Some(epsilon) = positive(survey.screen.epsilon, "[screen] epsilon")? {
-        screen.epsilon = epsilon;
+        screen.epsilon = Some(epsilon);
     }
     if let Some(passes) = survey.screen.passes {
         screen.passes = passes;
@@ -171,7 +179,9 @@ pub fn options_of(survey: &Survey) -> Result<AnalysisOptions, IoError> {
         None => {}
         Some(NumberOrText::Text(text)) if text == "auto" || text == "none" => {}
         Some(NumberOrText::Number(s)) if *s >= 0.0 => {}
-        Some(other) => return Err(IoError::setting("[fit] smoothing", format!("`{other}`; write auto, none or a number from 0"))),
+        Some(other) => {
+            return Err(IoError::setting("[fit] smoothing", format!("`{other}`; write auto, none or a number from 0")));
+        }
     }
     let lines = &survey.streamlines;
     let given = [lines.levels.is_some(), lines.count.is_some(), lines.step.is_some()];
@@ -190,7 +200,10 @@ pub fn options_of(survey: &Survey) -> Result<AnalysisOptions, IoError> {
     }
     if let Some(tolerance) = positive(lines.tolerance, "[streamlines] tolerance")? {
         if !(1e-6..=0.5).contains(&tolerance) {
-            return Err(IoError::setting("[streamlines] tolerance", format!("{tolerance} node spacings; expected 0.000001 to 0.5")));
+            return Err(IoError::setting(
+                "[streamlines] tolerance",
+                format!("{tolerance} node spacings; expected 0.000001 to 0.5"),
+            ));
         }
         options.trace = TraceOptions { tolerance, ..options.trace };
     }
@@ -230,7 +243,9 @@ pub fn psi_sign(survey: &Survey) -> Result<f64, IoError> {
     match survey.fit.sign.as_deref() {
         None | Some("+") => Ok(1.0),
         Some("-") => Ok(-1.0),
-        Some(other) => Err(IoError::setting("[fit] sign", format!("`{other}`; write + (u = dpsi/dy) or - (u = -dpsi/dy)"))),
+        Some(other) => {
+            Err(IoError::setting("[fit] sign", format!("`{other}`; write + (u = dpsi/dy) or - (u = -dpsi/dy)")))
+        }
     }
 }
 

@@ -54,7 +54,10 @@ impl Failure {
                 use isopsi::numerics::stream_function::FitError as F;
                 match error {
                     AnalysisError::Fit(
-                        F::ZeroNotWall { .. } | F::ZeroNotBody { .. } | F::ZeroOutside { .. } | F::CosineNotApplicable
+                        F::ZeroNotWall { .. }
+                        | F::ZeroNotBody { .. }
+                        | F::ZeroOutside { .. }
+                        | F::CosineNotApplicable
                         | F::WallPlace { .. },
                     ) => 2,
                     _ => 4,
@@ -93,7 +96,11 @@ impl Messages {
 
     /// Remarks, one a line.
     pub fn remarks<'a>(&self, remarks: impl Iterator<Item = &'a Remark>) {
-        let mark = if io::stderr().is_terminal() && std::env::var_os("NO_COLOR").is_none() { "\u{1b}[33mnote:\u{1b}[0m" } else { "note:" };
+        let mark = if io::stderr().is_terminal() && std::env::var_os("NO_COLOR").is_none() {
+            "\u{1b}[33mnote:\u{1b}[0m"
+        } else {
+            "note:"
+        };
         for remark in remarks {
             self.line(&format!("{mark} {remark}"));
         }

@@ -23,8 +23,11 @@ fn known_extension(out: &Path, known: &[&str]) -> Result<String, Failure> {
     if known.contains(&found.as_str()) {
         return Ok(found);
     }
-    Err(IoError::setting("--out", format!("{}: the extension decides the format; known here are .{}", out.display(), known.join(" .")))
-        .into())
+    Err(IoError::setting(
+        "--out",
+        format!("{}: the extension decides the format; known here are .{}", out.display(), known.join(" .")),
+    )
+    .into())
 }
 
 /// The screened and filled field.

@@ -20,7 +20,11 @@ pub fn inspect(common: &Common, write: Option<&Path>) -> Result<(), Failure> {
     let data = read(&common.inputs, &survey_of(common)?)?;
     if let Some(path) = write {
         if path.exists() {
-            return Err(isopsi::io::IoError::setting("--write", format!("{} exists; choose another name or remove it", path.display())).into());
+            return Err(isopsi::io::IoError::setting(
+                "--write",
+                format!("{} exists; choose another name or remove it", path.display()),
+            )
+            .into());
         }
         let text = survey_text(&data, path);
         write_whole(path, |w| w.write_all(text.as_bytes()))?;
@@ -67,7 +71,13 @@ fn describe(data: &Dataset) -> Value {
 
 fn axis_line(name: &str, axis: &Axis, unit: &str) -> String {
     let kind = if axis.is_uniform() { "uniform" } else { "stretched, mean" };
-    format!("{name}        {} nodes, {} to {} {unit}, {kind} spacing {:.6}\n", axis.len(), short(axis.first()), short(axis.last()), axis.mean_step())
+    format!(
+        "{name}        {} nodes, {} to {} {unit}, {kind} spacing {:.6}\n",
+        axis.len(),
+        short(axis.first()),
+        short(axis.last()),
+        axis.mean_step()
+    )
 }
 
 /// Up to 9 significant digits.
@@ -93,26 +103,41 @@ fn text(data: &Dataset) -> String {
     out += &axis_line("x", &field.grid().x, &length);
     out += &axis_line("y", &field.grid().y, &length);
     let solid = solid_count(data);
-    out += &format!("vectors  {} usable of {nodes} nodes, {solid} in bodies, {} gaps\n", field.valid_count(), nodes - solid - field.valid_count());
+    out += &format!(
+        "vectors  {} usable of {nodes} nodes, {solid} in bodies, {} gaps\n",
+        field.valid_count(),
+        nodes - solid - field.valid_count()
+    );
     for (name, array) in [("u", &field.u), ("v", &field.v)] {
         if let Some((low, high)) = range(array.iter().copied()) {
             out += &format!("{name}        {low:.6} to {high:.6} {velocity}\n");
         }
     }
     out += &match field.sigma.rms(&field.valid) {
-        Some(sigma) => format!("sigma    {sigma:.6} {velocity}{}\n", if matches!(field.sigma, Sigma::PerNode { .. }) { " (root mean square, given for every vector)" } else { "" }),
+        Some(sigma) => format!(
+            "sigma    {sigma:.6} {velocity}{}\n",
+            if matches!(field.sigma, Sigma::PerNode { .. }) {
+                " (root mean square, given for every vector)"
+            } else {
+                ""
+            }
+        ),
         None => "sigma    not declared\n".to_owned(),
     };
     out += &match field.overlap {
         Some(overlap) => format!("overlap  {overlap}\n"),
         None => "overlap  not declared\n".to_owned(),
     };
-    let walls: Vec<&str> = Side::ALL.into_iter().filter(|&s| field.domain.walls.get(s).is_some()).map(Side::name).collect();
+    let walls: Vec<&str> =
+        Side::ALL.into_iter().filter(|&s| field.domain.walls.get(s).is_some()).map(Side::name).collect();
     if !walls.is_empty() {
         out += &format!("walls    {}\n", walls.join(", "));
     }
     if field.domain.thickness != Thickness::Uniform {
-        out += &format!("depth    {}\n", if field.domain.thickness == Thickness::Radius { "axisymmetric about y = 0" } else { "map" });
+        out += &format!(
+            "depth    {}\n",
+            if field.domain.thickness == Thickness::Radius { "axisymmetric about y = 0" } else { "map" }
+        );
     }
     if data.remarks.is_empty() {
         out += "nothing looks doubtful\n";
@@ -133,7 +158,9 @@ fn survey_text(data: &Dataset, at: &Path) -> String {
         Some(value) => format!("{key} = {:28} # {why}\n", value),
         None => format!("# {key} = {example:26} # {why}\n"),
     };
-    let mut out = String::from("# Survey file: what was measured, and how well. Lines that begin with # are not in force.\n\n[data]\n");
+    let mut out = String::from(
+        "# Survey file: what was measured, and how well. Lines that begin with # are not in force.\n\n[data]\n",
+    );
     out += &format!("files = {}\n", files.first().map_or_else(|| "\"\"".to_owned(), |f| quote(f)));
     if data.frames > 1 {
         out += &format!("frames = \"{}\" # of {} frames, counted from 0\n", data.field.frame.index, data.frames);
@@ -149,16 +176,38 @@ fn survey_text(data: &Dataset, at: &Path) -> String {
         let list: Vec<String> = arrays.iter().map(|(role, path)| format!("{role} = {}", quote(path))).collect();
         out += &format!("arrays = {{ {} }}\n", list.join(", "));
     }
-    out += &known("zero", s.data.zero.as_deref().map(quote), "\"gap\"", "vectors of exactly (0, 0): \"value\" or \"gap\"");
+    out +=
+        &known("zero", s.data.zero.as_deref().map(quote), "\"gap\"", "vectors of exactly (0, 0): \"value\" or \"gap\"");
     out += "\n[geometry]\n";
-    out += &format!("# found: x {} to {}, y {} to {}, {} by {} nodes\n", short(data.field.grid().x.first()), short(data.field.grid().x.last()), short(data.field.grid().y.first()), short(data.field.grid().y.last()), data.field.grid().nx(), data.field.grid().ny());
-    out += &known("y", s.geometry.y.as_deref().map(quote), "\"down\"", "\"down\" when y and v count downwards, as in images");
-    out += &known("scale", s.geometry.scale.as_deref().map(quote), "\"0.05 mm\"", "length of a pixel, for data in pixels");
+    out += &format!(
+        "# found: x {} to {}, y {} to {}, {} by {} nodes\n",
+        short(data.field.grid().x.first()),
+        short(data.field.grid().x.last()),
+        short(data.field.grid().y.first()),
+        short(data.field.grid().y.last()),
+        data.field.grid().nx(),
+        data.field.grid().ny()
+    );
+    out += &known(
+        "y",
+        s.geometry.y.as_deref().map(quote),
+        "\"down\"",
+        "\"down\" when y and v count downwards, as in images",
+    );
+    out +=
+        &known("scale", s.geometry.scale.as_deref().map(quote), "\"0.05 mm\"", "length of a pixel, for data in pixels");
     out += &known("interval", s.geometry.interval.as_deref().map(quote), "\"2 ms\"", "time between the two exposures");
     out += "\n[units]\n";
-    let unit = |declared: &Option<String>, found: &Option<String>| declared.clone().or_else(|| found.clone()).map(|u| quote(&u));
+    let unit = |declared: &Option<String>, found: &Option<String>| {
+        declared.clone().or_else(|| found.clone()).map(|u| quote(&u))
+    };
     out += &known("length", unit(&s.units.length, &data.file_units.0), "\"mm\"", "unit of the coordinates in the data");
-    out += &known("velocity", unit(&s.units.velocity, &data.file_units.1), "\"mm/s\"", "unit of the velocities in the data");
+    out += &known(
+        "velocity",
+        unit(&s.units.velocity, &data.file_units.1),
+        "\"mm/s\"",
+        "unit of the velocities in the data",
+    );
     out += "\n[noise]\n";
     let sigma = s.noise.sigma.as_ref().map(|v| quote(&v.to_string()));
     out += &known("sigma", sigma, "\"0.4 mm/s\"", "standard uncertainty (k = 1) of u and of v");
@@ -166,8 +215,15 @@ fn survey_text(data: &Dataset, at: &Path) -> String {
     out += &known("overlap", overlap, "0.5", "share by which neighboring windows overlap");
     out += "\n# [[solid]]                      # a body; as often as needed\n# circle = { x = 0.0, y = 0.0, radius = 1.0 }\n# surface = \"no-slip\"            # slip, no-slip or free\n";
     out += "\n[walls]                         # impermeable sides\n";
-    for (side, value) in [("bottom", &s.walls.bottom), ("top", &s.walls.top), ("left", &s.walls.left), ("right", &s.walls.right)] {
-        out += &known(side, value.as_deref().map(quote), "\"no-slip at 0.0\"", "slip or no-slip; at: position, when off the outermost vectors");
+    for (side, value) in
+        [("bottom", &s.walls.bottom), ("top", &s.walls.top), ("left", &s.walls.left), ("right", &s.walls.right)]
+    {
+        out += &known(
+            side,
+            value.as_deref().map(quote),
+            "\"no-slip at 0.0\"",
+            "slip or no-slip; at: position, when off the outermost vectors",
+        );
     }
     out
 }

@@ -52,8 +52,19 @@ impl<'a> Job<'a> {
             (Ok(a), Ok(b)) => a == b,
             _ => false,
         };
-        if self.data.sources.iter().map(|s| s.path.as_path()).chain(self.common.inputs.iter().map(AsRef::as_ref)).any(|p| same(p, out)) {
-            return Err(IoError::setting("--out", format!("{} is the input itself; choose another name", out.display())).into());
+        if self
+            .data
+            .sources
+            .iter()
+            .map(|s| s.path.as_path())
+            .chain(self.common.inputs.iter().map(AsRef::as_ref))
+            .any(|p| same(p, out))
+        {
+            return Err(IoError::setting(
+                "--out",
+                format!("{} is the input itself; choose another name", out.display()),
+            )
+            .into());
         }
         isopsi::io::output::ensure_writable(out)?;
         Ok(())
@@ -94,7 +105,12 @@ impl<'a> Job<'a> {
         Provenance {
             command: std::env::args().collect::<Vec<_>>().join(" "),
             settings: settings(&self.data.survey),
-            inputs: self.data.sources.iter().map(|s| (s.path.display().to_string(), s.size, s.sha256.clone())).collect(),
+            inputs: self
+                .data
+                .sources
+                .iter()
+                .map(|s| (s.path.display().to_string(), s.size, s.sha256.clone()))
+                .collect(),
             remarks: self.data.remarks.clone(),
         }
     }

@@ -4,7 +4,8 @@ use std::fs;
 use std::path::Path;
 
 use isopsi::analysis::{Analysis, Check, Features, FittedFlow};
-use isopsi::figure::Figure;
+use isopsi::field::Thickness;
+use isopsi::figure::{BACKGROUNDS, ColorMap, Figure, FigureInput, background_of, caption_of, step_of};
 use isopsi::io::IoError;
 use isopsi::io::output::{ensure_writable, write_whole};
 use isopsi::io::survey::NumberOrText;
@@ -17,7 +18,15 @@ use super::job::{Job, print, settings};
 
 /// Files a run writes, the summary last: where it stands, the others are whole.
 const FILES: [&str; 10] = [
-    "summary.json", "field.h5", "stagnation.csv", "streamlines.csv", "lines.csv", "cells.csv", "figure.svg", "figure.pdf", "figure.png",
+    "summary.json",
+    "field.h5",
+    "stagnation.csv",
+    "streamlines.csv",
+    "lines.csv",
+    "cells.csv",
+    "figure.svg",
+    "figure.pdf",
+    "figure.png",
     "field.npz",
 ];
 
@@ -76,8 +85,15 @@ fn prepare(job: &Job<'_>, out: &Path, overwrite: bool) -> Result<(), Failure> {
     ensure_writable(&out.join("summary.json"))?;
     let present: Vec<&str> = FILES.iter().copied().filter(|f| out.join(f).exists()).collect();
     for source in &job.data.sources {
-        if present.iter().any(|f| matches!((out.join(f).canonicalize(), source.path.canonicalize()), (Ok(a), Ok(b)) if a == b)) {
-            return Err(IoError::setting("--out", format!("{} holds the input {}; choose another folder", out.display(), source.path.display())).into());
+        if present
+            .iter()
+            .any(|f| matches!((out.join(f).canonicalize(), source.path.canonicalize()), (Ok(a), Ok(b)) if a == b))
+        {
+            return Err(IoError::setting(
+                "--out",
+                format!("{} holds the input {}; choose another folder", out.display(), source.path.display()),
+            )
+            .into());
         }
     }
     if overwrite || present.is_empty() {
@@ -88,15 +104,24 @@ fn prepare(job: &Job<'_>, out: &Path, overwrite: bool) -> Result<(), Failure> {
         .and_then(|text| serde_json::from_str::<Value>(&text).ok())
         .is_some_and(|old| {
             let sums: Vec<&str> = job.data.sources.iter().map(|s| s.sha256.as_str()).collect();
-            let old_sums: Vec<&str> = old["inputs"].as_array().map(|a| a.iter().filter_map(|i| i["sha256"].as_str()).collect()).unwrap_or_default();
-            old["settings"] == settings(&job.data.survey) && old["version"] == env!("CARGO_PKG_VERSION") && sums == old_sums
+            let old_sums: Vec<&str> = old["inputs"]
+                .as_array()
+                .map(|a| a.iter().filter_map(|i| i["sha256"].as_str()).collect())
+                .unwrap_or_default();
+            old["settings"] == settings(&job.data.survey)
+                && old["version"] == env!("CARGO_PKG_VERSION")
+                && sums == old_sums
         });
     if same {
         return Ok(());
     }
     Err(IoError::setting(
         "--out",
-        format!("{} holds results of other settings or inputs ({}); choose another folder or say --overwrite", out.display(), present.join(", ")),
+        format!(
+            "{} holds results of other settings or inputs ({}); choose another folder or say --overwrite",
+            out.display(),
+            present.join(", ")
+        ),
     )
     .into())
 }
@@ -116,7 +141,13 @@ pub fn draw(job: &Job<'_>, flow: &FittedFlow, check: &Check, features: &Features
                 "single" => 90.0,
                 "wide" => 140.0,
                 "double" => 190.0,
-                other => return Err(IoError::setting("[figure] width", format!("`{other}`; write single, wide, double or millimeters")).into()),
+                other => {
+                    return Err(IoError::setting(
+                        "[figure] width",
+                        format!("`{other}`; write single, wide, double or millimeters"),
+                    )
+                    .into());
+                }
             };
         }
         Some(NumberOrText::Number(mm)) => {
@@ -131,16 +162,26 @@ pub fn draw(job: &Job<'_>, flow: &FittedFlow, check: &Check, features: &Features
     }
     options.labels = table.labels.unwrap_or(true);
     if let Some(name) = &table.color_map {
-        options.color_map = Some(name.clone());
+        options.color_map = Some(ColorMap::of(name).ok_or_else(|| {
+            IoError::setting("[figure] color_map", format!("`{name}`; known are {}", ColorMap::NAMES.join(", ")))
+        })?);
     }
-    let background = table.background.as_deref().unwrap_or("speed");
-    report::figure(flow, check, features, &job.context, background, &options)
-        .ok_or_else(|| {
-            IoError::setting(
-                "[figure] background",
-                format!("`{background}`; write none, speed, vorticity, divergence, divergence_z, psi or residual"),
-            )
-            .into()
-        })
-        .and_then(|r| r.map_err(Failure::from))
+    let name = table.background.as_deref().unwrap_or("speed");
+    let (units, sign) = (&job.context.units, job.context.psi_sign);
+    let plane = flow.used.domain.thickness == Thickness::Uniform;
+    let background = background_of(name, flow, check, units, plane, sign).ok_or_else(|| {
+        IoError::setting("[figure] background", format!("`{name}`; known are {}", BACKGROUNDS.join(", ")))
+    })?;
+    let caption = caption_of(flow, check, features, units, plane, &report::zero_in_words(flow));
+    let input = FigureInput {
+        domain: &flow.used.domain,
+        contours: &features.lines,
+        points: &features.points,
+        background,
+        units,
+        psi_sign: sign,
+        psi_step: step_of(features),
+        caption,
+    };
+    Ok(isopsi::figure::draw(&input, &options)?)
 }

@@ -128,7 +128,10 @@ fn write_npy(path: &Path, file: &FieldFile) -> Result<(), IoError> {
         .take(2)
         .collect();
     let [u, v] = planes[..] else {
-        return Err(IoError::setting("--out", "a .npy file holds u and v; this result has fewer than two arrays, use .npz"));
+        return Err(IoError::setting(
+            "--out",
+            "a .npy file holds u and v; this result has fewer than two arrays, use .npz",
+        ));
     };
     let mut both = Array3::zeros((2, u.nrows(), u.ncols()));
     both.slice_mut(s![0, .., ..]).assign(u);

@@ -11,12 +11,16 @@ use std::path::Path;
 use hdf5::types::VarLenUnicode;
 use hdf5::{Dataset, File, Location};
 use hdf5_sys::h5a::{H5Aclose, H5Acreate2, H5Awrite};
+use hdf5_sys::h5f::{H5F_ACC_TRUNC, H5Fclose, H5Fcreate};
 use hdf5_sys::h5i::hid_t;
-use hdf5_sys::h5p::H5P_DEFAULT;
-use hdf5_sys::h5r::{H5R_OBJECT, H5Rcreate, hobj_ref_t};
+use hdf5_sys::h5p::{
+    H5P_CLS_FILE_CREATE, H5P_CRT_ORDER_INDEXED, H5P_CRT_ORDER_TRACKED, H5P_DEFAULT, H5Pclose, H5Pcreate,
+    H5Pset_link_creation_order,
+};
+use hdf5_sys::h5r::{H5R_type_t, H5Rcreate, hobj_ref_t};
 use hdf5_sys::h5s::{H5S_SCALAR, H5Sclose, H5Screate, H5Screate_simple};
 use hdf5_sys::h5t::{
-    H5T_COMPOUND, H5T_C_S1, H5T_NATIVE_INT, H5T_STD_REF_OBJ, H5T_STR_NULLTERM, H5Tclose, H5Tcopy, H5Tcreate, H5Tinsert,
+    H5T_C_S1, H5T_COMPOUND, H5T_NATIVE_INT, H5T_STD_REF_OBJ, H5T_STR_NULLTERM, H5Tclose, H5Tcopy, H5Tcreate, H5Tinsert,
     H5Tset_size, H5Tset_strpad, H5Tvlen_create, hvl_t,
 };
 use ndarray::{Array3, Axis as Dim};
@@ -30,10 +34,8 @@ use crate::field::{Flags, UnitSystem};
 /// What the C library or the system said, as [`io::Error`].
 pub fn write(path: &Path, file: &FieldFile) -> io::Result<()> {
     hdf5::silence_errors(true);
-    let out = File::with_options()
-        .with_fcpl(|p| p.link_creation_order(hdf5::plist::LinkCreationOrder::TRACKED | hdf5::plist::LinkCreationOrder::INDEXED))
-        .create(path)
-        .map_err(failure)?;
+    create_ordered(path)?;
+    let out = File::open_rw(path).map_err(failure)?;
     let mut kept: Vec<Dataset> = Vec::new();
     let result = fill(&out, file, &mut kept).and_then(|()| out.flush().map_err(failure));
     if result.is_err() {
@@ -49,6 +51,25 @@ pub fn write(path: &Path, file: &FieldFile) -> io::Result<()> {
     std::fs::File::open(path)?.sync_all()
 }
 
+/// Creates an empty file whose links keep the order in which they are made, as NetCDF-4 asks.
+fn create_ordered(path: &Path) -> io::Result<()> {
+    let name = c_string(path.to_str().ok_or_else(|| io::Error::other("a path that is not UTF-8"))?)?;
+    hdf5::sync::sync(|| {
+        // SAFETY: plain calls of the C library under its lock; both identifiers are closed.
+        unsafe {
+            let plist = H5Pcreate(*H5P_CLS_FILE_CREATE);
+            H5Pset_link_creation_order(plist, H5P_CRT_ORDER_TRACKED | H5P_CRT_ORDER_INDEXED);
+            let file = H5Fcreate(name.as_ptr(), H5F_ACC_TRUNC, plist, H5P_DEFAULT);
+            H5Pclose(plist);
+            if file < 0 {
+                return Err(io::Error::other("the HDF5 library cannot create the file"));
+            }
+            H5Fclose(file);
+        }
+        Ok(())
+    })
+}
+
 fn failure(e: hdf5::Error) -> io::Error {
     let text = e.to_string();
     if text.contains("No space left") || text.contains("errno = 28") {
@@ -58,7 +79,8 @@ fn failure(e: hdf5::Error) -> io::Error {
 }
 
 fn text(at: &Location, name: &str, value: &str) -> io::Result<()> {
-    let value: VarLenUnicode = value.replace('\0', " ").parse().map_err(|_| io::Error::other("text with a zero byte"))?;
+    let value: VarLenUnicode =
+        value.replace('\0', " ").parse().map_err(|_| io::Error::other("text with a zero byte"))?;
     at.new_attr::<VarLenUnicode>().create(name).and_then(|a| a.write_scalar(&value)).map_err(failure)
 }
 
@@ -80,8 +102,13 @@ fn fill(out: &File, file: &FieldFile, kept: &mut Vec<Dataset>) -> io::Result<()>
     ];
     let mut scales = Vec::new();
     for (name, values, units, axis, long_name) in &axes {
-        let shape = if *name == "time" { hdf5::Extents::resizable((1,)) } else { hdf5::Extents::simple((values.len(),)) };
-        let builder = out.new_dataset::<f64>().attr_creation_order(hdf5::plist::AttrCreationOrder::TRACKED);
+        let shape = if *name == "time" {
+            hdf5::Extents::new([hdf5::Extent::resizable(1)])
+        } else {
+            hdf5::Extents::new(values.len())
+        };
+        let builder =
+            out.new_dataset::<f64>().attr_creation_order(hdf5::plist::dataset_create::AttrCreationOrder::TRACKED);
         let builder = if *name == "time" { builder.chunk((512,)) } else { builder };
         let scale = builder.shape(shape).create(*name).map_err(failure)?;
         scale.write(values).map_err(failure)?;
@@ -96,15 +123,12 @@ fn fill(out: &File, file: &FieldFile, kept: &mut Vec<Dataset>) -> io::Result<()>
         scales.push(scale);
     }
     for variable in &file.variables {
-        let extents = hdf5::Extents::new([
-            hdf5::Extent::resizable(1),
-            hdf5::Extent::fixed(ny),
-            hdf5::Extent::fixed(nx),
-        ]);
+        let extents =
+            hdf5::Extents::new([hdf5::Extent::resizable(1), hdf5::Extent::fixed(ny), hdf5::Extent::fixed(nx)]);
         macro_rules! create {
             ($type:ty) => {
                 out.new_dataset::<$type>()
-                    .attr_creation_order(hdf5::plist::AttrCreationOrder::TRACKED)
+                    .attr_creation_order(hdf5::plist::dataset_create::AttrCreationOrder::TRACKED)
                     .chunk((1, ny, nx))
                     .shuffle()
                     .deflate(4)
@@ -112,10 +136,15 @@ fn fill(out: &File, file: &FieldFile, kept: &mut Vec<Dataset>) -> io::Result<()>
         }
         let dataset = match &variable.data {
             VariableData::F64(data) => {
-                let dataset = create!(f64).fill_value(f64::NAN).shape(extents).create(variable.name.as_str()).map_err(failure)?;
+                let dataset =
+                    create!(f64).fill_value(f64::NAN).shape(extents).create(variable.name.as_str()).map_err(failure)?;
                 let frame: Array3<f64> = data.clone().insert_axis(Dim(0));
                 dataset.write(&frame).map_err(failure)?;
-                dataset.new_attr::<f64>().create("_FillValue").and_then(|a| a.write_scalar(&f64::NAN)).map_err(failure)?;
+                dataset
+                    .new_attr::<f64>()
+                    .create("_FillValue")
+                    .and_then(|a| a.write_scalar(&f64::NAN))
+                    .map_err(failure)?;
                 unit(&dataset, &variable.units)?;
                 dataset
             }
@@ -124,7 +153,12 @@ fn fill(out: &File, file: &FieldFile, kept: &mut Vec<Dataset>) -> io::Result<()>
                 let frame: Array3<u8> = data.clone().insert_axis(Dim(0));
                 dataset.write(&frame).map_err(failure)?;
                 let masks: Vec<u8> = Flags::MEANINGS.iter().map(|(flag, _)| flag.0).collect();
-                dataset.new_attr::<u8>().shape(masks.len()).create("flag_masks").and_then(|a| a.write(&masks)).map_err(failure)?;
+                dataset
+                    .new_attr::<u8>()
+                    .shape(masks.len())
+                    .create("flag_masks")
+                    .and_then(|a| a.write(&masks))
+                    .map_err(failure)?;
                 let meanings: Vec<&str> = Flags::MEANINGS.iter().map(|(_, name)| *name).collect();
                 text(&dataset, "flag_meanings", &meanings.join(" "))?;
                 dataset
@@ -199,7 +233,7 @@ fn link(out: &File, scales: &[Dataset], variables: &[&Dataset], names: &[&str; 3
         let name = c_string(name)?;
         let mut r: hobj_ref_t = 0;
         // SAFETY: `r` is large enough for an object reference; called under the lock by the caller.
-        let status = unsafe { H5Rcreate((&raw mut r).cast(), out.id(), name.as_ptr(), H5R_OBJECT, -1) };
+        let status = unsafe { H5Rcreate((&raw mut r).cast(), out.id(), name.as_ptr(), H5R_type_t::H5R_OBJECT1, -1) };
         if status < 0 { Err(io::Error::other("cannot refer to a dataset")) } else { Ok(r) }
     };
     hdf5::sync::sync(|| -> io::Result<()> {
@@ -223,7 +257,8 @@ fn link(out: &File, scales: &[Dataset], variables: &[&Dataset], names: &[&str; 3
             H5Tinsert(pair, dataset.as_ptr(), mem::offset_of!(Link, variable), *H5T_STD_REF_OBJ);
             H5Tinsert(pair, dimension.as_ptr(), mem::offset_of!(Link, dimension), *H5T_NATIVE_INT);
             for (d, scale) in scales.iter().enumerate() {
-                let links: Vec<Link> = to_variables.iter().map(|&variable| Link { variable, dimension: d as i32 }).collect();
+                let links: Vec<Link> =
+                    to_variables.iter().map(|&variable| Link { variable, dimension: d as i32 }).collect();
                 let n = links.len() as u64;
                 let space = H5Screate_simple(1, &raw const n, std::ptr::null());
                 put(scale.id(), &reference_list, pair, space, links.as_ptr().cast())?;

@@ -285,11 +285,8 @@ impl BoxTest {
             if *m == 1 {
                 base = nu;
             }
-            let p_free = if *m == 1 {
-                f64::NAN
-            } else {
-                FisherSnedecor::new(nu, base).map_or(f64::NAN, |f| f.sf(free))
-            };
+            let p_free =
+                if *m == 1 { f64::NAN } else { FisherSnedecor::new(nu, base).map_or(f64::NAN, |f| f.sf(free)) };
             let p = if declared { ChiSquared::new(nu).map_or(f64::NAN, |c| c.sf(nu * t)) } else { p_free };
             growth.push(p_free);
             let noise = mean(&tiles, |t| t.variance) * used * used;
@@ -496,7 +493,8 @@ fn estimate_overlap(outflows: &Outflows) -> Option<OverlapEstimate> {
                 }
             }
             variance /= size.chosen.len() as f64;
-            let nu = degrees(outflows, size.m, &size.places, &rho, 6) * size.chosen.len() as f64 / size.places.len() as f64;
+            let nu =
+                degrees(outflows, size.m, &size.places, &rho, 6) * size.chosen.len() as f64 / size.places.len() as f64;
             weights.push(2.0 * nu);
             logs.push(0.5 * (clipped_mean_square(&size.squares) / variance).ln());
         }
@@ -587,7 +585,10 @@ mod tests {
         grid.x = Axis::from_nodes((0..20).map(|i| i as f64 + 0.2 * (i as f64 * 0.7).sin()).collect()).unwrap();
         let sigma = |j: usize, i: usize| 0.5 + 0.05 * j as f64 + 0.02 * i as f64;
         let f = sampled(grid, |_, _| (0.0, 0.0)).without(|j, i| (j, i) == (6, 7) || (j > 12 && i < 4)).with_sigma(
-            Sigma::PerNode { u: Array2::from_shape_fn((20, 20), |(j, i)| sigma(j, i)), v: Array2::from_elem((20, 20), 0.7) },
+            Sigma::PerNode {
+                u: Array2::from_shape_fn((20, 20), |(j, i)| sigma(j, i)),
+                v: Array2::from_elem((20, 20), 0.7),
+            },
         );
         for overlap in [0.0, 0.5] {
             let rho = Correlation::new(overlap);
@@ -609,7 +610,12 @@ mod tests {
                 let ratio = mean(&expected, |t| t.variance) * places.len() as f64 / sums.iter().sum::<f64>();
                 approx::assert_abs_diff_eq!(ratio, 1.0, epsilon = 0.03);
                 for (t, sum) in expected.iter().zip(&sums) {
-                    assert!((0.7..1.35).contains(&(sum / t.variance)), "{m} {overlap} {:?}: {}", t.place, sum / t.variance);
+                    assert!(
+                        (0.7..1.35).contains(&(sum / t.variance)),
+                        "{m} {overlap} {:?}: {}",
+                        t.place,
+                        sum / t.variance
+                    );
                 }
                 if m == 1 {
                     approx::assert_abs_diff_eq!(allowance, 1.0, epsilon = 0.25);
@@ -711,7 +717,8 @@ mod tests {
         let mut domain = (*plane.domain).clone();
         domain.thickness = Thickness::Radius;
         let round = VelocityField { domain: Arc::new(domain), ..plane.clone() };
-        let verdict = |f: VelocityField| check_divergence(&declared(f, 0.01, 0.0), &DivergenceOptions::default()).verdict;
+        let verdict =
+            |f: VelocityField| check_divergence(&declared(f, 0.01, 0.0), &DivergenceOptions::default()).verdict;
         assert_eq!(verdict(plane), Verdict::Inconsistent);
         assert_eq!(verdict(round), Verdict::Consistent);
     }

@@ -131,7 +131,8 @@ mod tests {
     }
 
     fn stretched(n: usize) -> Axis {
-        Axis::from_nodes((0..n).map(|k| k as f64 / (n - 1) as f64).map(|t| t + 0.1 * (3.0 * t).sin()).collect()).unwrap()
+        Axis::from_nodes((0..n).map(|k| k as f64 / (n - 1) as f64).map(|t| t + 0.1 * (3.0 * t).sin()).collect())
+            .unwrap()
     }
 
     #[test] // u = sin x, v = sin y: divergence cos x + cos y
@@ -159,7 +160,9 @@ mod tests {
         let f = field(axis.clone(), axis, |x, y| (-y, x)).without(|j, i| (j, i) == (4, 4));
         let maps = gradient_maps(&f, 0.0);
         for node in [(0, 3), (8, 3), (3, 0), (4, 4), (3, 4), (5, 4), (4, 3), (4, 5)] {
-            assert!(maps.divergence[node].is_nan() && maps.vorticity[node].is_nan() && maps.divergence_sigma[node].is_nan());
+            assert!(
+                maps.divergence[node].is_nan() && maps.vorticity[node].is_nan() && maps.divergence_sigma[node].is_nan()
+            );
         }
         approx::assert_abs_diff_eq!(maps.vorticity[[3, 3]], 2.0, epsilon = 1e-12);
         approx::assert_abs_diff_eq!(maps.divergence[[3, 3]], 0.0, epsilon = 1e-12);

@@ -271,7 +271,11 @@ mod tests {
         // Circulation around the 3 x 3 block over its area 4 h^2: trapezoid sides with weights 1/8, 1/4, 1/8.
         let side = |fixed: usize, weight: f64, along_x: bool| {
             [(0, 0.125), (1, 0.25), (2, 0.125)].map(|(k, w)| {
-                if along_x { Term { j: fixed, i: k, weight: w * weight } } else { Term { j: k, i: fixed, weight: w * weight } }
+                if along_x {
+                    Term { j: fixed, i: k, weight: w * weight }
+                } else {
+                    Term { j: k, i: fixed, weight: w * weight }
+                }
             })
         };
         let mut u = [side(0, 1.0, true), side(2, -1.0, true)].concat();
@@ -285,17 +289,25 @@ mod tests {
 
     #[test]
     fn covariance_is_the_full_double_sum_whatever_the_sigma_and_overlap() {
-        let sigma = NodeSigma::Map(Array2::from_shape_fn((9, 8), |(j, i)| 1.0 + 0.1 * j as f64 + 0.03 * (i * i) as f64));
+        let sigma =
+            NodeSigma::Map(Array2::from_shape_fn((9, 8), |(j, i)| 1.0 + 0.1 * j as f64 + 0.03 * (i * i) as f64));
         let terms = |seed: usize| -> Vec<Term> {
-            (0..72).filter(|k| k * seed % 5 < 2).map(|k| Term { j: k / 8, i: k % 8, weight: (k * seed) as f64 % 7.0 - 3.0 }).collect()
+            (0..72)
+                .filter(|k| k * seed % 5 < 2)
+                .map(|k| Term { j: k / 8, i: k % 8, weight: (k * seed) as f64 % 7.0 - 3.0 })
+                .collect()
         };
         let (a, b) = (terms(3), terms(7));
         for overlap in [0.0, 0.3, 0.5, 0.75, 0.9] {
             let mut full = 0.0;
             for s in &a {
                 for t in &b {
-                    full += s.weight * t.weight * sigma.at(s.j, s.i) * sigma.at(t.j, t.i)
-                        * correlation(s.j.abs_diff(t.j), overlap) * correlation(s.i.abs_diff(t.i), overlap);
+                    full += s.weight
+                        * t.weight
+                        * sigma.at(s.j, s.i)
+                        * sigma.at(t.j, t.i)
+                        * correlation(s.j.abs_diff(t.j), overlap)
+                        * correlation(s.i.abs_diff(t.i), overlap);
                 }
             }
             approx::assert_relative_eq!(covariance(&a, &b, &sigma, &Correlation::new(overlap)), full, epsilon = 1e-10);

@@ -110,7 +110,12 @@ struct Edges {
 impl Edges {
     fn pattern(&self, k: usize, c: usize) -> usize {
         let usable = |m: Option<usize>| m.is_some_and(|m| m < self.values.nrows() && self.values[[m, c]].is_finite());
-        Corrections::pattern(usable(k.checked_sub(2)), usable(k.checked_sub(1)), usable(Some(k + 2)), usable(Some(k + 3)))
+        Corrections::pattern(
+            usable(k.checked_sub(2)),
+            usable(k.checked_sub(1)),
+            usable(Some(k + 2)),
+            usable(Some(k + 3)),
+        )
     }
 
     fn correction(&self, k: usize, c: usize) -> Option<&Correction> {

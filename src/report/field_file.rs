@@ -70,7 +70,8 @@ pub fn field_file(flow: &FittedFlow, check: &Check, context: &ReportContext) -> 
     variables.push(flags(flow));
     let map = &check.map;
     variables.push(variable("divergence", map.divergence.clone(), units.rate(), "divergence of the measured field"));
-    if let Some(z) = map.z() {
+    if flow.used.sigma != Sigma::Unknown {
+        let z = map.divergence_z(1.0);
         variables.push(variable("divergence_z", z, "1".to_owned(), "divergence over its standard uncertainty"));
     }
     variables.push(variable("vorticity", map.vorticity.clone(), units.rate(), "vorticity, counter-clockwise positive"));
@@ -123,7 +124,13 @@ fn sigma_arrays(flow: &FittedFlow) -> Option<(Array2<f64>, Array2<f64>)> {
     }
     let build = |of_u: bool| {
         Array2::from_shape_fn(flow.measured.valid.dim(), |(j, i)| match flow.measured.sigma.at(j, i) {
-            Some((u, v)) if flow.measured.valid[[j, i]] => if of_u { u } else { v },
+            Some((u, v)) if flow.measured.valid[[j, i]] => {
+                if of_u {
+                    u
+                } else {
+                    v
+                }
+            }
             _ => f64::NAN,
         })
     };

@@ -72,7 +72,7 @@ pub fn summary(analysis: &Analysis, context: &ReportContext, from: &Provenance, 
         "vectors": vectors(flow),
         "sigma": {
             "declared": number(flow.used.sigma.rms(&flow.used.valid)),
-            "estimated": number(analysis.check.report.sigma_estimated),
+            "estimated": number(analysis.check.report.sigma_estimated.map(|l| l.sigma)),
             "overlap": number(flow.used.overlap),
         },
         "divergence": divergence(&analysis.check),
@@ -81,7 +81,7 @@ pub fn summary(analysis: &Analysis, context: &ReportContext, from: &Provenance, 
         "counts": counts,
         "topology": {
             "index_sum": features.index_sum,
-            "turning_number": number(features.turning.number().map(|n| n as f64)),
+            "turning_number": number(features.turning.number.map(f64::from)),
         },
         "levels": features.levels.iter().map(|level| context.psi_sign * level).collect::<Vec<_>>(),
         "seconds": times.iter().map(|t| (t.stage.to_owned(), json!(t.seconds))).collect::<Map<String, Value>>(),
@@ -138,22 +138,27 @@ pub fn divergence(check: &Check) -> Value {
         .iter()
         .map(|s| {
             json!({
-                "cells": s.m, "boxes": s.boxes, "rms_outflow": number(Some(s.rms_outflow)),
-                "expected": number(s.expected_rms), "statistic": number(s.statistic), "nu": number(s.nu), "p": number(s.p),
+                "cells": s.size, "boxes": s.boxes, "outflow_rms": number(Some(s.outflow_rms)),
+                "outflow_rms_of_noise": number(Some(s.noise_rms)), "statistic": number(Some(s.statistic)),
+                "degrees_of_freedom": number(Some(s.degrees)), "p": number(Some(s.p)),
+                "truncation_share": number(Some(s.truncation_share)),
             })
         })
         .collect();
     json!({
-        "rms": number(Some(report.rms_divergence)),
-        "expected_from_noise": number(report.expected_rms_divergence),
-        "sigma_declared": number(report.sigma_declared),
-        "sigma_estimated": number(report.sigma_estimated),
-        "overlap": report.overlap,
-        "p": number(report.p),
-        "boxes": scales,
-        "residual_share": number(Some(check.residual.share)),
-        "residual_share_expected_from_noise": number(check.residual.expected),
         "verdict": report.verdict.name(),
+        "reason": report.reason.text(),
+        "p": number(Some(report.p)),
+        "rms": number(Some(report.divergence_rms)),
+        "rms_of_noise": number(Some(report.divergence_noise)),
+        "truncation_share": number(Some(report.truncation_share)),
+        "sigma_declared": number(report.sigma_declared),
+        "sigma_estimated": number(report.sigma_estimated.map(|l| l.sigma)),
+        "sigma_estimated_uncertainty": number(report.sigma_estimated.map(|l| l.uncertainty)),
+        "sigma_estimated_is_upper_bound": report.sigma_estimated.map(|l| l.upper_bound),
+        "overlap": report.overlap,
+        "overlap_estimated": number(report.overlap_estimated.map(|e| e.overlap)),
+        "boxes": scales,
     })
 }
 

@@ -36,8 +36,23 @@ fn optional(value: Option<f64>) -> Value {
 /// `stagnation.csv`: a row a point; columns of the ensemble are empty.
 pub fn stagnation_table(flow: &FittedFlow, features: &Features, context: &ReportContext) -> Table {
     const COLUMNS: [&str; 17] = [
-        "frame", "id", "kind", "x", "y", "psi", "sigma_psi", "sigma_x", "sigma_y", "rho_xy", "rate", "period", "persistence",
-        "z", "share", "flag", "notes",
+        "frame",
+        "id",
+        "kind",
+        "x",
+        "y",
+        "psi",
+        "sigma_psi",
+        "sigma_x",
+        "sigma_y",
+        "rho_xy",
+        "rate",
+        "period",
+        "persistence",
+        "z",
+        "share",
+        "flag",
+        "notes",
     ];
     let mut table = Table::new(&COLUMNS, units_of(&COLUMNS, &context.units, plane(flow)));
     for point in &features.points {
@@ -113,8 +128,23 @@ pub fn lines_table(flow: &FittedFlow, features: &Features, context: &ReportConte
 /// `cells.csv`: a row a recirculation cell; the length along a wall from separation to attachment stands in `wall_length`.
 pub fn cells_table(flow: &FittedFlow, features: &Features, context: &ReportContext) -> Table {
     const COLUMNS: [&str; 17] = [
-        "frame", "cell", "center_id", "bound_id", "sense", "area", "sigma_area", "flux", "sigma_flux", "period_mid", "x", "y",
-        "flag", "wall_length", "separation_id", "attachment_id", "notes",
+        "frame",
+        "cell",
+        "center_id",
+        "bound_id",
+        "sense",
+        "area",
+        "sigma_area",
+        "flux",
+        "sigma_flux",
+        "period_mid",
+        "x",
+        "y",
+        "flag",
+        "wall_length",
+        "separation_id",
+        "attachment_id",
+        "notes",
     ];
     let mut table = Table::new(&COLUMNS, units_of(&COLUMNS, &context.units, plane(flow)));
     let id = |id: Option<usize>| id.map_or(Value::Empty, |id| Value::Int(id as i64));
@@ -145,4 +175,21 @@ pub fn cells_table(flow: &FittedFlow, features: &Features, context: &ReportConte
 /// Number of points of a kind.
 pub fn count_kind(features: &Features, kind: StagnationKind) -> usize {
     features.points.iter().filter(|p| p.kind == kind).count()
+}
+
+/// A table as a JSON array of objects; empty cells are null.
+pub fn table_json(table: &Table) -> serde_json::Value {
+    let rows = table.rows().iter().map(|row| {
+        let object = table.columns().iter().zip(row).map(|(name, value)| {
+            let value = match value {
+                Value::Int(i) => serde_json::json!(i),
+                Value::Real(r) if r.is_finite() => serde_json::json!(r),
+                Value::Text(t) => serde_json::json!(t),
+                Value::Empty | Value::Real(_) => serde_json::Value::Null,
+            };
+            (name.clone(), value)
+        });
+        serde_json::Value::Object(object.collect())
+    });
+    serde_json::Value::Array(rows.collect())
 }
