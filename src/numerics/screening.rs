@@ -94,11 +94,21 @@ impl Screening {
 /// there predict than to the median around it: walls, corners and shear layers continue along themselves, a wrong vector does not.
 const GUARD: f64 = 0.3;
 
+/// Share of the scatter of the other component below which that of a component is never taken: in a wall layer one component can
+/// be almost constant where the other turns within a node.
+const CROSS_SHARE: f64 = 0.25;
+
+/// How much closer a one-sided prediction must come where both sides are known.
+const ONE_SIDED_PENALTY: f64 = 10.0;
+
 /// Ratio of the scatter about a median of eight to sigma, white noise: sqrt(1 + 1.5 / 8), the variance of the median included.
 const MEDIAN_SCATTER: f64 = 1.09;
 
 /// Median absolute deviation to standard deviation of a normal sample.
 const MAD: f64 = 1.482_602_218_505_602;
+
+/// Share of the scatter seen in the data below which a declared sigma is not believed: on a coarse grid the flow itself varies more.
+const LEAST_SCATTER: f64 = 0.5;
 
 /// Rounding: scatter below this share of the rms speed is none.
 const ROUNDING: f64 = 1e-10;
@@ -108,11 +118,16 @@ const ROUNDING: f64 = 1e-10;
 /// Source: Westerweel & Scarano 2005 (from memory).  0 when value and median agree exactly; infinite when there is neither scatter
 /// nor floor.  `neighbors` is reordered.
 pub fn normalized_median(value: f64, neighbors: &mut [f64], epsilon: f64) -> f64 {
-    let middle = median(neighbors);
+    let (middle, scatter) = median_and_scatter(neighbors);
     let deviation = (value - middle).abs();
-    neighbors.iter_mut().for_each(|n| *n = (*n - middle).abs());
-    let scatter = median(neighbors) + epsilon;
-    if deviation == 0.0 { 0.0 } else { deviation / scatter }
+    if deviation == 0.0 { 0.0 } else { deviation / (scatter + epsilon) }
+}
+
+/// Median and median absolute deviation from it.
+fn median_and_scatter(values: &mut [f64]) -> (f64, f64) {
+    let middle = median(values);
+    values.iter_mut().for_each(|n| *n = (*n - middle).abs());
+    (middle, median(values))
 }
 
 /// Median by partial sorting; NaN of an empty slice.
@@ -137,25 +152,26 @@ fn around(valid: &Array2<bool>, j: usize, i: usize) -> impl Iterator<Item = (usi
 ///
 /// * Gaps: up to eight neighbors, those of a rim or gap fewer; with fewer than [`ScreenOptions::min_neighbors`] no judgment.  A
 ///   vector all of whose neighbors were rejected is rejected too.
-/// * Each component is judged; the worse one counts.  Stretched axes: the plain median of the same eight nodes.
+/// * Each component is judged, its scatter not taken below a quarter of that of the other; the worse one counts.  Stretched axes: the plain median of the same eight nodes.
 /// * Accuracy: finds single vectors and the rims of clusters; the inside of a cluster is left to [`screen_by_fit`].
 pub fn screen_by_median(field: &VelocityField, options: &ScreenOptions) -> Screening {
     let shape = field.grid().shape();
     let mut found = Screening::nothing(shape);
     let mut valid = field.valid.clone();
     let allowed = (options.max_share * field.valid_count() as f64) as usize;
-    found.scale = match options.epsilon {
-        Some(epsilon) => epsilon,
-        None => {
-            let sigma = field.sigma.rms(&field.valid).unwrap_or_else(|| median_scatter(field));
-            ScreenOptions::EPSILON_FACTOR * sigma
-        }
-    };
+    let estimated = median_scatter(field);
+    found.scale = options.epsilon.unwrap_or_else(|| {
+        let sigma = field.sigma.rms(&field.valid);
+        ScreenOptions::EPSILON_FACTOR * sigma.map_or(estimated, |sigma| sigma.max(LEAST_SCATTER * estimated))
+    });
+    let least = ScreenOptions::EPSILON_FACTOR * LEAST_SCATTER * estimated;
     for _ in 0..options.passes {
         found.passes += 1;
         let judged: Vec<Vec<(f64, bool)>> = (0..shape.0)
             .into_par_iter()
-            .map(|j| (0..shape.1).map(|i| judge_by_median(field, &valid, j, i, found.scale, options)).collect())
+            .map(|j| {
+                (0..shape.1).map(|i| judge_by_median(field, &valid, j, i, (found.scale, least), options)).collect()
+            })
             .collect();
         let mut candidates = Vec::new();
         for (j, row) in judged.iter().enumerate() {
@@ -203,7 +219,7 @@ fn judge_by_median(
     valid: &Array2<bool>,
     j: usize,
     i: usize,
-    common: f64,
+    (common, least): (f64, f64),
     options: &ScreenOptions,
 ) -> (f64, bool) {
     if !valid[[j, i]] {
@@ -214,18 +230,22 @@ fn judge_by_median(
         return (f64::NAN, false);
     }
     let declared = field.sigma.at(j, i).filter(|_| options.epsilon.is_none());
-    let epsilons = declared
-        .map_or((common, common), |(su, sv)| (ScreenOptions::EPSILON_FACTOR * su, ScreenOptions::EPSILON_FACTOR * sv));
-    let (mut worst, mut reject) = (0.0_f64, false);
-    for (f, epsilon) in [(&field.u, epsilons.0), (&field.v, epsilons.1)] {
+    let epsilons = declared.map_or((common, common), |(su, sv)| {
+        ((ScreenOptions::EPSILON_FACTOR * su).max(least), (ScreenOptions::EPSILON_FACTOR * sv).max(least))
+    });
+    let parts = [(&field.u, epsilons.0), (&field.v, epsilons.1)].map(|(f, epsilon)| {
         let mut values: Vec<f64> = nodes.iter().map(|&node| f[node]).collect();
-        let ratio = normalized_median(f[[j, i]], &mut values, epsilon) / options.limit;
-        worst = worst.max(ratio);
-        if ratio > 1.0 {
-            let mut values: Vec<f64> = nodes.iter().map(|&node| f[node]).collect();
-            let deviation = (f[[j, i]] - median(&mut values)).abs();
-            reject |= continuation_error(field, f, valid, j, i) > GUARD * deviation;
+        let (middle, scatter) = median_and_scatter(&mut values);
+        (f, (f[[j, i]] - middle).abs(), scatter, epsilon)
+    });
+    let (mut worst, mut reject) = (0.0_f64, false);
+    for (k, &(f, deviation, scatter, epsilon)) in parts.iter().enumerate() {
+        if deviation == 0.0 {
+            continue;
         }
+        let ratio = deviation / (scatter.max(CROSS_SHARE * parts[1 - k].2) + epsilon) / options.limit;
+        worst = worst.max(ratio);
+        reject |= ratio > 1.0 && continuation_error(field, f, valid, j, i) > GUARD * deviation;
     }
     (worst.min(f64::MAX), reject)
 }
@@ -246,8 +266,9 @@ fn continuation_error(field: &VelocityField, f: &Array2<f64>, valid: &Array2<boo
             (_, 0) => grid.y.at(jj) - grid.y.at(j),
             _ => k as f64,
         };
-        // Centered sets, then one-sided ones: beside a jump of the flow only one side continues.
-        const SETS: [&[isize]; 6] = [&[-2, -1, 1, 2], &[-1, 1, 2], &[-2, -1, 1], &[-1, 1], &[1, 2, 3], &[-1, -2, -3]];
+        // From the best supported prediction down; the first that is possible counts.
+        const SETS: [&[isize]; 4] = [&[-2, -1, 1, 2], &[-1, 1, 2], &[-2, -1, 1], &[-1, 1]];
+        const ONE_SIDED: [&[isize]; 2] = [&[1, 2, 3], &[-1, -2, -3]];
         let predict = |set: &[isize]| -> Option<f64> {
             let mut points = [(0.0, 0.0); 4];
             for (slot, &k) in points.iter_mut().zip(set) {
@@ -265,8 +286,14 @@ fn continuation_error(field: &VelocityField, f: &Array2<f64>, valid: &Array2<boo
             )
         };
         let here = f[[j, i]];
-        for value in SETS.iter().filter_map(|set| predict(set)) {
+        if let Some(value) = SETS.iter().find_map(|set| predict(set)) {
             least = least.min((value - here).abs());
+        }
+        // Beside a rim or gap a vector may also continue what lies on its other side; elsewhere only if it does so closely.
+        let beside = node(-2).is_none() || node(2).is_none();
+        let penalty = if beside { 1.0 } else { ONE_SIDED_PENALTY };
+        for value in ONE_SIDED.iter().filter_map(|set| predict(set)) {
+            least = least.min(penalty * (value - here).abs());
         }
     }
     least
@@ -329,7 +356,7 @@ const PEEL: usize = 2;
 /// Share of the worst residual around from which a vector may go in the same pass: errors spread to at most 0.18 of it for each.
 const PEEL_SHARE: f64 = 0.5;
 /// Share of the local spread of the velocity below which a residual is never judged an error, however clean the data.
-const SPREAD_SHARE: f64 = 0.05;
+const SPREAD_SHARE: f64 = 0.1;
 
 /// One pass of the test of every vector against the field fitted to all the others.
 ///
@@ -458,9 +485,7 @@ fn local_spread(field: &VelocityField, j: usize, i: usize) -> f64 {
             }
         }
         let values = &mut values[..n];
-        let middle = median(values);
-        values.iter_mut().for_each(|v| *v = (*v - middle).abs());
-        largest = largest.max(median(values));
+        largest = largest.max(median_and_scatter(values).1);
     }
     largest
 }

@@ -6,7 +6,9 @@
 #[path = "../flows/mod.rs"]
 mod flows;
 
+mod consistency;
 mod facts;
+mod outliers;
 mod points;
 
 use std::sync::Arc;
