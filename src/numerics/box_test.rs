@@ -5,13 +5,14 @@
 //! neighboring boxes (Satterthwaite 1946, from memory), and the smallest p value over the sizes is corrected after Bonferroni.
 //! What the quadrature and the grid cannot resolve is allowed for, so that exact fields are not taken for divergent ones.
 
+use ndarray::Array2;
 use rayon::prelude::*;
 use statrs::distribution::{ChiSquared, ContinuousCDF, FisherSnedecor};
 
 use super::divergence::gradient_maps;
 use super::noise::{Correlation, Term};
 use super::outflow::{Outflows, Tile};
-use crate::field::{Sigma, VelocityField};
+use crate::field::{Axis, Sigma, VelocityField};
 
 /// Settings of the check.
 #[derive(Debug, Clone, PartialEq)]
@@ -234,6 +235,43 @@ pub fn check_divergence(field: &VelocityField, options: &DivergenceOptions) -> D
         truncation_share: test.scales.first().map_or(f64::NAN, |s| s.truncation_share),
         scales: test.scales,
     }
+}
+
+/// Outflow of the boxes of one size, for display; arrays are `(rows, columns)` of boxes, NaN where a box does not count.
+#[derive(Debug, Clone, PartialEq)]
+pub struct BoxMap {
+    /// Box side in cells.
+    pub size: usize,
+    /// Box edges along x, one more than columns.
+    pub x: Vec<f64>,
+    /// Box edges along y, one more than rows.
+    pub y: Vec<f64>,
+    /// Outflow, velocity times length (times thickness).
+    pub outflow: Array2<f64>,
+    /// Outflow over its standard deviation from noise and truncation.
+    pub z: Array2<f64>,
+}
+
+/// Map of the outflow of boxes of `size x size` cells.
+///
+/// `scale`: noise level as a multiple of the declared sigma, or sigma itself when none is declared.
+pub fn box_map(field: &VelocityField, size: usize, overlap: f64, scale: f64) -> BoxMap {
+    let size = size.max(1);
+    let outflows = Outflows::new(field);
+    let (shape, (j0, i0)) = outflows.layout(size);
+    let edges = |axis: &Axis, first: usize, count: usize| (0..=count).map(|k| axis.at(first + k * size)).collect();
+    let mut map = BoxMap {
+        size,
+        x: edges(&field.grid().x, i0, shape.1),
+        y: edges(&field.grid().y, j0, shape.0),
+        outflow: Array2::from_elem(shape, f64::NAN),
+        z: Array2::from_elem(shape, f64::NAN),
+    };
+    for tile in outflows.tiles(size, &outflows.places(size), &Correlation::new(overlap), scale) {
+        map.outflow[tile.place] = tile.outflow;
+        map.z[tile.place] = tile.outflow / tile.total_variance(scale).sqrt();
+    }
+    map
 }
 
 /// Noise level as a multiple of the sigma of the field.
@@ -515,10 +553,8 @@ mod tests {
     use std::f64::consts::TAU;
     use std::sync::Arc;
 
-    use ndarray::Array2;
-
     use super::*;
-    use crate::field::{Axis, Domain, Grid, Thickness};
+    use crate::field::{Domain, Grid, Thickness};
     use crate::numerics::noise::NoiseGenerator;
 
     fn square(n: usize) -> Grid {
@@ -709,6 +745,20 @@ mod tests {
             let report = check_divergence(&field, &DivergenceOptions::default());
             assert_eq!((report.verdict, report.reason), (Verdict::Undecided, Reason::TooFewCells), "{report:#?}");
         }
+    }
+
+    #[test]
+    fn box_map_places_a_source_in_its_box() {
+        let f = sampled(square(20), |x, y| {
+            let (a, b) = (x - 0.51, y - 0.27);
+            let r2 = a * a + b * b + 1e-4;
+            (a / r2, b / r2)
+        });
+        let map = box_map(&declared(f, 0.01, 0.0), 4, 0.0, 1.0);
+        assert_eq!((map.outflow.dim(), map.x.len(), map.y.len()), ((4, 4), 5, 5));
+        let largest = map.outflow.indexed_iter().max_by(|a, b| a.1.total_cmp(b.1)).unwrap().0;
+        let inside = |edges: &[f64], k: usize, at: f64| edges[k] <= at && at <= edges[k + 1];
+        assert!(inside(&map.y, largest.0, 0.27) && inside(&map.x, largest.1, 0.51) && map.z[largest] > 5.0);
     }
 
     #[test] // axisymmetric stagnation flow u_x = -2 x, u_r = r: divergent in the plane, not with the radius as thickness

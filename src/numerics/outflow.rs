@@ -256,6 +256,11 @@ impl Outflows {
         (offset(self.usable.nrows()) + place.0 * m, offset(self.usable.ncols()) + place.1 * m)
     }
 
+    /// Number of tiles of a size along y and x, and the first node of tile `(0, 0)`.
+    pub fn layout(&self, m: usize) -> ((usize, usize), (usize, usize)) {
+        ((self.usable.nrows() / m, self.usable.ncols() / m), self.corner(m, (0, 0)))
+    }
+
     /// Calls `visit(k, c, sign)` for every edge of `edges` on the outline of a tile.
     fn outline(&self, edges: &Edges, m: usize, place: (usize, usize), mut visit: impl FnMut(usize, usize, f64)) {
         let (j0, i0) = self.corner(m, place);

@@ -629,7 +629,7 @@ mod tests {
     fn no_more_than_the_stated_share_is_rejected_and_the_report_says_so() {
         let mut f = sampled(20, |_, _| (1.0, 0.0));
         for k in 0..80 {
-            f.u[[(k * 7) % 20, (k * 11 + k / 20) % 20]] = 50.0 + k as f64;
+            f.u[[(k * 7) % 20, (k * 11 + k / 20) % 20]] = 50.0 + (k * 37 % 29) as f64;
         }
         let options = ScreenOptions { max_share: 0.05, ..ScreenOptions::default() };
         let found = screen_by_median(&f, &options);
