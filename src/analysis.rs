@@ -2,16 +2,17 @@
 
 use ndarray::{Array2, Zip};
 
-use crate::extract::cells::{Cell, CellOptions, find_cells};
+use crate::extract::cells::{Cell, CellOptions, Sense, find_cells};
 use crate::extract::contour::{Contour, Scene, TraceOptions, trace_contours, wall_contours};
-use crate::extract::levels::{LevelChoice, choose_levels};
+use crate::extract::levels::{LevelChoice, choose_levels, round_step};
 use crate::extract::separatrix::trace_separatrices;
 use crate::extract::stagnation::{
     StagnationKind, StagnationOptions, StagnationPoint, find_stagnation_points, index_sum, number_points,
 };
 use crate::extract::turning::{Turning, turning_number};
 use crate::extract::wall_points::{WallPointOptions, find_wall_points};
-use crate::field::{FieldError, Flags, Remark, RemarkKind, Thickness, VelocityField};
+use crate::extract::trace::{distance_to_segment, encloses};
+use crate::field::{Domain, FieldError, Flags, Remark, RemarkKind, Shape, Side, Thickness, VelocityField};
 use crate::numerics::box_test::{DivergenceOptions, DivergenceReport, Verdict, check_divergence};
 use crate::numerics::divergence::{GradientMaps, gradient_maps};
 use crate::numerics::extend::extended_surface;
@@ -340,7 +341,7 @@ pub fn find_features(flow: &FittedFlow, options: &AnalysisOptions, observer: Obs
     remarks.extend(search.remark());
     let index_sum = index_sum(&search.points);
     let turning = turning_number(&flow.surface, domain, &options.stagnation);
-    let mut points = search.points;
+    let mut points = beside_walls(search.points, flow, &options.stagnation);
     let mut wall_options = options.wall_points.clone();
     if wall_options.psi_noise == 0.0
         && let Some(sigma) = flow.used.sigma.rms(&flow.used.valid)
@@ -361,8 +362,103 @@ pub fn find_features(flow: &FittedFlow, options: &AnalysisOptions, observer: Obs
     lines.extend(trace_separatrices(&scene, &points, &options.trace));
     lines.extend(wall_contours(&scene, body_psi, wall_psi));
     let cells = find_cells(&scene, &points, body_psi, wall_psi, &options.cells);
+    if matches!(options.levels, LevelChoice::Count(_)) {
+        lines.extend(lines_inside(&scene, &cells, &points, &levels, options));
+    }
     observer(Stage::Lines);
     Features { points, index_sum, turning, levels, lines, cells, remarks }
+}
+
+/// A cell through which fewer streamlines than this run gets its own finer round levels.
+const LINES_IN_CELL: usize = 3;
+
+/// Streamlines inside weak recirculation cells, at finer round levels.
+fn lines_inside(
+    scene: &Scene<'_>,
+    cells: &[Cell],
+    points: &[StagnationPoint],
+    levels: &[f64],
+    options: &AnalysisOptions,
+) -> Vec<Contour> {
+    let strongest = cells.iter().map(|c| c.flux).fold(0.0, f64::max);
+    let mut out = Vec::new();
+    for cell in cells.iter().filter(|c| c.flux > WEAKEST_CELL * strongest) {
+        let Some(center) = points.iter().find(|p| p.id == cell.center_id) else { continue };
+        let inward = if cell.sense == Sense::CounterClockwise { 1.0 } else { -1.0 };
+        let bound = center.psi - inward * cell.flux;
+        let (low, high) = (bound.min(center.psi), bound.max(center.psi));
+        let inside = |c: f64| c > low + 0.02 * cell.flux && c < high - 0.02 * cell.flux;
+        if levels.iter().filter(|&&c| inside(c)).count() >= LINES_IN_CELL {
+            continue;
+        }
+        let step = round_step(cell.flux / (LINES_IN_CELL as f64 + 1.0));
+        let finer: Vec<f64> = ((low / step).ceil() as i64..=(high / step).floor() as i64)
+            .map(|k| k as f64 * step)
+            .filter(|&c| inside(c) && !levels.iter().any(|l| (l - c).abs() < 1e-9 * step))
+            .collect();
+        let around = [[center.x, center.y]];
+        out.extend(
+            trace_contours(scene, &finer, &around, &options.trace)
+                .into_iter()
+                .filter(|line| line.closed && encloses(&line.vertices, around[0]) && encloses(&cell.boundary, line.vertices[0])),
+        );
+    }
+    out
+}
+
+/// Cells carrying less than this share of the strongest one get no lines of their own.
+const WEAKEST_CELL: f64 = 0.02;
+
+/// Points within this many node spacings of a wall or body are looked for on the surface that knows psi there.
+const BESIDE_WALL: f64 = 1.5;
+
+/// Points of the nodal surface away from walls and bodies, of the extended one beside them: between the outermost vectors and a wall
+/// only the psi of the wall tells a stagnation point from noise.
+fn beside_walls(nodal: Vec<StagnationPoint>, flow: &FittedFlow, options: &StagnationOptions) -> Vec<StagnationPoint> {
+    let domain = &flow.used.domain;
+    let reach = BESIDE_WALL * flow.used.grid().spacing();
+    let close = |p: &StagnationPoint| distance_to_solids(domain, &flow.fit.body_psi, &flow.fit.wall_psi, [p.x, p.y]) <= reach;
+    if !nodal.iter().any(close) && domain.walls.is_empty() && domain.bodies.is_empty() {
+        return nodal;
+    }
+    let extended = find_stagnation_points(&flow.extended, domain, options).points;
+    let least = BESIDE_WALL / 3.0 * flow.used.grid().spacing();
+    let mut points: Vec<StagnationPoint> = nodal.into_iter().filter(|p| !close(p)).collect();
+    points.extend(extended.into_iter().filter(|p| {
+        close(p)
+            && distance_to_solids(domain, &flow.fit.body_psi, &flow.fit.wall_psi, [p.x, p.y]) > least
+            && !domain.bodies.iter().any(|b| b.shape.contains(p.x, p.y))
+    }));
+    points
+}
+
+/// Distance to the nearest wall or body that psi is tied to, infinite without any.
+fn distance_to_solids(domain: &Domain, body_psi: &[f64], wall_psi: &[f64; 4], p: [f64; 2]) -> f64 {
+    let grid = &domain.grid;
+    let mut nearest = f64::INFINITY;
+    for (side, psi) in Side::ALL.into_iter().zip(wall_psi) {
+        let Some(wall) = domain.walls.get(side) else { continue };
+        if psi.is_finite() {
+            nearest = nearest.min(match side {
+                Side::Bottom => p[1] - wall.at.unwrap_or(grid.y.first()),
+                Side::Top => wall.at.unwrap_or(grid.y.last()) - p[1],
+                Side::Left => p[0] - wall.at.unwrap_or(grid.x.first()),
+                Side::Right => wall.at.unwrap_or(grid.x.last()) - p[0],
+            });
+        }
+    }
+    for (body, psi) in domain.bodies.iter().zip(body_psi) {
+        if psi.is_finite() {
+            nearest = nearest.min(match &body.shape {
+                Shape::Circle { x, y, radius } => (p[0] - x).hypot(p[1] - y) - radius,
+                Shape::Polygon { vertices } => (0..vertices.len())
+                    .map(|k| distance_to_segment(p, vertices[k], vertices[(k + 1) % vertices.len()]))
+                    .fold(f64::INFINITY, f64::min),
+                Shape::Nodes => f64::INFINITY,
+            });
+        }
+    }
+    nearest
 }
 
 /// Marks points in cells with a filled corner.

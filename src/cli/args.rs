@@ -109,21 +109,6 @@ pub enum Command {
 }
 
 impl Command {
-    /// Name as typed.
-    pub fn name(&self) -> &'static str {
-        match self {
-            Command::Run { .. } => "run",
-            Command::Inspect { .. } => "inspect",
-            Command::Divergence { .. } => "divergence",
-            Command::Clean { .. } => "clean",
-            Command::Psi { .. } => "psi",
-            Command::Stagnation { .. } => "stagnation",
-            Command::Streamlines { .. } => "streamlines",
-            Command::Flux { .. } => "flux",
-            Command::Figure { .. } => "figure",
-        }
-    }
-
     /// The options all commands share.
     pub fn common(&self) -> &Common {
         match self {

@@ -122,7 +122,7 @@ pub fn draw_axes(scene: &mut Scene, plot: &Plot, unit: &str, size: f64) {
     }
     put_text(
         scene,
-        [x0 + 0.5 * w, y0 + h + 2.6 + 2.2 * size],
+        [x0 + 0.5 * w, y0 + h + 2.2 + 1.95 * size],
         &label("x", px),
         size,
         0.0,

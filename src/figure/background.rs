@@ -15,6 +15,9 @@ const PIXELS: usize = 640;
 /// Share of the values at either end that may exceed the color range: a few outliers must not wash out the rest.
 const CLIPPED: f64 = 0.005;
 
+/// A pixel is colored when nodes with at least this share of the bilinear weights carry a value.
+const SEEN: f64 = 0.25;
+
 /// A field shown by color.
 #[derive(Debug, Clone)]
 pub struct Background {
@@ -63,16 +66,17 @@ pub fn draw_image(
     map: ColorMap,
 ) -> Result<(), FigureError> {
     let Some((low, high)) = color_range(background) else { return Ok(()) };
-    let (lx, ly) = (grid.x.extent(), grid.y.extent());
+    // The image covers the plot; between the outermost nodes and a wall beyond them the colors of the nodes go on.
+    let (lx, ly) = (plot.x[1] - plot.x[0], plot.y[1] - plot.y[0]);
     let longest = lx.max(ly);
     let pixels = |length: f64| ((PIXELS as f64 * length / longest) as usize).max(8);
     let (w, h) = (pixels(lx), pixels(ly));
     let mut image = vec![[0u8; 4]; w * h];
     for r in 0..h {
-        let y = grid.y.last() - (r as f64 + 0.5) / h as f64 * ly;
+        let y = (plot.y[1] - (r as f64 + 0.5) / h as f64 * ly).clamp(grid.y.first(), grid.y.last());
         let Some((j, s)) = grid.y.locate(y) else { continue };
         for c in 0..w {
-            let x = grid.x.first() + (c as f64 + 0.5) / w as f64 * lx;
+            let x = (plot.x[0] + (c as f64 + 0.5) / w as f64 * lx).clamp(grid.x.first(), grid.x.last());
             let Some((i, t)) = grid.x.locate(x) else { continue };
             let (mut sum, mut weight) = (0.0, 0.0);
             for (node, share) in [
@@ -87,13 +91,13 @@ pub fn draw_image(
                     weight += share;
                 }
             }
-            if weight >= 0.5 {
+            if weight >= SEEN {
                 let [red, green, blue] = map.color((sum / weight - low) / (high - low));
                 image[r * w + c] = [red, green, blue, 255];
             }
         }
     }
-    let upper_left = plot.place([grid.x.first(), grid.y.last()]);
+    let upper_left = plot.place([plot.x[0], plot.y[1]]);
     scene.items.push(Item::Image {
         at: upper_left,
         size: [lx * plot.scale, ly * plot.scale],

@@ -34,7 +34,7 @@ pub struct FigureOptions {
     pub font_size_pt: f64,
     /// Whether levels are written along the lines.
     pub labels: bool,
-    /// Color map of the background; `None`: batlow, vik for signed fields.
+    /// Color map of the background; `None`: lapaz, vik for signed fields.
     pub color_map: Option<ColorMap>,
     /// Resolution of PNG files, pixels an inch.
     pub dpi: f64,
@@ -198,7 +198,7 @@ pub fn draw(input: &FigureInput<'_>, options: &FigureOptions) -> Result<Figure, 
         let at = [plot.at[0] + plot.size()[0] + 2.5, plot.at[1]];
         draw_bar(&mut scene, at, plot_height, background, map, size)?;
     }
-    let mut y = plot.at[1] + plot_height + 4.2 + 2.2 * size;
+    let mut y = plot.at[1] + plot_height + 3.2 + 2.0 * size;
     y = draw_legend(&mut scene, input, y, size, options.width_mm);
     y = draw_caption(&mut scene, &input.caption, y, 0.92 * size, options.width_mm);
     scene.height = y + 1.0;
@@ -378,8 +378,8 @@ pub fn caption_of(
         "Streamlines at chosen levels".to_owned()
     };
     let sigma = match flow.used.sigma.rms(&flow.used.valid) {
-        Some(sigma) => format!("sigma {} {}", trim(sigma), font::typeset_unit(&units.velocity())),
-        None => "sigma not declared".to_owned(),
+        Some(sigma) => format!("σ = {} {}", trim(sigma), font::typeset_unit(&units.velocity())),
+        None => "σ not declared".to_owned(),
     };
     format!("{step}, ψ = 0 {zero}; {sigma}; verdict: {}.", check.report.verdict.name())
 }

@@ -101,6 +101,19 @@ fn level_text(value: f64, step: f64) -> String {
     text.replace('-', "−")
 }
 
+/// Levels labelled at most; of more, only every second, fourth or fifth ... round one is.
+const MOST_LABELS: usize = 9;
+
+/// Distance between labelled levels: the step times 1, 2, 4, 5, 10 ...; 0 when levels have no common step.
+fn label_stride(contours: &[Contour], step: f64) -> f64 {
+    let mut levels: Vec<i64> =
+        contours.iter().filter(|c| c.role == Role::Level && step > 0.0).map(|c| (c.psi / step).round() as i64).collect();
+    levels.sort_unstable();
+    levels.dedup();
+    let fits = |n: i64| levels.iter().filter(|k| *k % n == 0).count() <= MOST_LABELS;
+    [1, 2, 4, 5, 10, 20, 40, 50, 100].into_iter().find(|&n| fits(n)).unwrap_or(200) as f64 * step
+}
+
 /// Writes levels along the lines, upright, each where the line is straight and nothing else stands; lines without such a place stay
 /// without a label.
 pub fn draw_labels(
@@ -115,7 +128,9 @@ pub fn draw_labels(
     let [w, h] = plot.size();
     let frame = ([plot.at[0] + 0.6, plot.at[1] + 0.6], [plot.at[0] + w - 0.6, plot.at[1] + h - 0.6]);
     let mut labelled: Vec<(f64, [f64; 2])> = Vec::new();
-    let mut order: Vec<&Contour> = contours.iter().filter(|c| c.role == Role::Level).collect();
+    let stride = label_stride(contours, step);
+    let wanted = |psi: f64| stride == 0.0 || ((psi / stride) - (psi / stride).round()).abs() < 1e-6 || ((psi / step) - (psi / step).round()).abs() > 1e-6;
+    let mut order: Vec<&Contour> = contours.iter().filter(|c| c.role == Role::Level && wanted(c.psi)).collect();
     order.sort_by(|a, b| b.length.total_cmp(&a.length));
     for contour in order {
         let text = level_text(sign * contour.psi, step);

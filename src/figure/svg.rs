@@ -109,7 +109,7 @@ pub fn to_svg(scene: &Scene, title: &str) -> String {
                     let _ = writeln!(
                         out,
                         "<text {base} fill=\"#ffffff\" stroke=\"#ffffff\" stroke-width=\"{}\" stroke-opacity=\"0.85\" stroke-linejoin=\"round\">{body}</text>",
-                        number(0.32 * size)
+                        number(0.2 * size)
                     );
                 }
                 let _ = writeln!(out, "<text {base} fill=\"#1b1f24\">{body}</text>");

@@ -12,7 +12,7 @@ pub const RADIUS: f64 = 1.25;
 
 /// Draws the mark of a kind at a place on the page.
 ///
-/// Center: a ring with a dot, an arrow running round it in its sense.  Saddle: a star of four hollow points.  Separation: a dark
+/// Center: a dot with an arrow running round it in its sense.  Saddle: a star of four hollow points.  Separation: a dark
 /// half-disc on the wall with a stem into the flow; attachment: the same, white, without the stem.
 pub fn draw_symbol(
     scene: &mut Scene,
@@ -25,13 +25,13 @@ pub fn draw_symbol(
     let line = |w: f64| Style { fill: Some(WHITE), stroke: Some((DARK, w)), dash: None };
     match kind {
         StagnationKind::Center => {
-            scene.circle(at, 0.62 * radius, line(0.22));
-            scene.circle(at, 0.2 * radius, Style::area(DARK));
+            scene.circle(at, 1.25 * radius, Style::area(WHITE.faint(0.8)));
+            scene.circle(at, 0.3 * radius, Style::area(DARK));
             // Page angles run clockwise; a counter-clockwise arrow goes the other way.
             let turn = if counter_clockwise { -1.0 } else { 1.0 };
-            let (from, to) = (-0.5 * turn, 4.2 * turn);
-            scene.path(arc(at, radius, from, to, 24), false, Style::line(DARK, 0.22));
-            let tip = [at[0] + radius * to.cos(), at[1] + radius * to.sin()];
+            let (from, to) = (-0.4 * turn, 4.3 * turn);
+            scene.path(arc(at, 0.88 * radius, from, to, 24), false, Style::line(DARK, 0.26));
+            let tip = [at[0] + 0.88 * radius * to.cos(), at[1] + 0.88 * radius * to.sin()];
             let tangent = [-turn * to.sin(), turn * to.cos()];
             let across = [to.cos(), to.sin()];
             let head = 0.45 * radius;
