@@ -34,7 +34,7 @@ pub struct FigureOptions {
     pub font_size_pt: f64,
     /// Whether levels are written along the lines.
     pub labels: bool,
-    /// Color map of the background; `None`: lapaz, vik for signed fields.
+    /// Color map of the background; `None`: cividis, vik for signed fields.
     pub color_map: Option<ColorMap>,
     /// Resolution of PNG files, pixels an inch.
     pub dpi: f64,
@@ -176,6 +176,17 @@ pub fn draw(input: &FigureInput<'_>, options: &FigureOptions) -> Result<Figure, 
         .map(|p| TextBox { center: plot.place([p.x, p.y]), half: [1.3 * RADIUS, 1.3 * RADIUS], angle: 0.0 })
         .collect();
     draw_bodies(&mut scene, &plot, input, &mut taken);
+    // Labels keep off the separatrices as well.
+    for line in input.contours.iter().filter(|c| c.role == Role::Separatrix) {
+        let mut last = [f64::NAN; 2];
+        for &v in &line.vertices {
+            let p = plot.place(v);
+            if !((p[0] - last[0]).hypot(p[1] - last[1]) < 1.0) {
+                taken.push(TextBox { center: p, half: [0.4, 0.4], angle: 0.0 });
+                last = p;
+            }
+        }
+    }
     scene.items.push(Item::EndClip);
     draw_walls(&mut scene, &plot, input.domain);
     if options.labels {

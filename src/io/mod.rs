@@ -4,6 +4,8 @@ mod assemble;
 pub mod error;
 pub mod field_file;
 mod geometry;
+#[cfg(feature = "hdf5")]
+mod hdf5;
 mod inputs;
 #[cfg(feature = "hdf5")]
 mod netcdf;

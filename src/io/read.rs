@@ -175,6 +175,10 @@ fn read_raw(path: &Path, request: &ArrayRequest) -> Result<RawFrame, IoError> {
     }
 }
 
+#[cfg(feature = "hdf5")]
+use super::hdf5::read_hdf5;
+
+#[cfg(not(feature = "hdf5"))]
 fn read_hdf5(path: &Path, _: &ArrayRequest) -> Result<RawFrame, IoError> {
     Err(IoError::content(path, "content", "an HDF5 file, but this build of isopsi has no HDF5 (feature `hdf5`)"))
 }
