@@ -9,9 +9,9 @@ use crate::extract::separatrix::trace_separatrices;
 use crate::extract::stagnation::{
     StagnationKind, StagnationOptions, StagnationPoint, find_stagnation_points, index_sum, number_points,
 };
+use crate::extract::trace::{distance_to_segment, encloses};
 use crate::extract::turning::{Turning, turning_number};
 use crate::extract::wall_points::{WallPointOptions, find_wall_points};
-use crate::extract::trace::{distance_to_segment, encloses};
 use crate::field::{Domain, FieldError, Flags, Remark, RemarkKind, Shape, Side, Thickness, VelocityField};
 use crate::numerics::box_test::{DivergenceOptions, DivergenceReport, Verdict, check_divergence};
 use crate::numerics::divergence::{GradientMaps, gradient_maps};
@@ -397,11 +397,9 @@ fn lines_inside(
             .filter(|&c| inside(c) && !levels.iter().any(|l| (l - c).abs() < 1e-9 * step))
             .collect();
         let around = [[center.x, center.y]];
-        out.extend(
-            trace_contours(scene, &finer, &around, &options.trace)
-                .into_iter()
-                .filter(|line| line.closed && encloses(&line.vertices, around[0]) && encloses(&cell.boundary, line.vertices[0])),
-        );
+        out.extend(trace_contours(scene, &finer, &around, &options.trace).into_iter().filter(|line| {
+            line.closed && encloses(&line.vertices, around[0]) && encloses(&cell.boundary, line.vertices[0])
+        }));
     }
     out
 }
@@ -417,7 +415,8 @@ const BESIDE_WALL: f64 = 1.5;
 fn beside_walls(nodal: Vec<StagnationPoint>, flow: &FittedFlow, options: &StagnationOptions) -> Vec<StagnationPoint> {
     let domain = &flow.used.domain;
     let reach = BESIDE_WALL * flow.used.grid().spacing();
-    let close = |p: &StagnationPoint| distance_to_solids(domain, &flow.fit.body_psi, &flow.fit.wall_psi, [p.x, p.y]) <= reach;
+    let close =
+        |p: &StagnationPoint| distance_to_solids(domain, &flow.fit.body_psi, &flow.fit.wall_psi, [p.x, p.y]) <= reach;
     if !nodal.iter().any(close) && domain.walls.is_empty() && domain.bodies.is_empty() {
         return nodal;
     }

@@ -162,7 +162,7 @@ pub fn draw(input: &FigureInput<'_>, options: &FigureOptions) -> Result<Figure, 
     let map = options.color_map.unwrap_or(if input.background.as_ref().is_some_and(|b| b.signed) {
         ColorMap::Vik
     } else {
-        ColorMap::Batlow
+        ColorMap::Cividis
     });
 
     scene.items.push(Item::Clip { at: plot.at, size: plot.size() });

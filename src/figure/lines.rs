@@ -106,8 +106,11 @@ const MOST_LABELS: usize = 9;
 
 /// Distance between labelled levels: the step times 1, 2, 4, 5, 10 ...; 0 when levels have no common step.
 fn label_stride(contours: &[Contour], step: f64) -> f64 {
-    let mut levels: Vec<i64> =
-        contours.iter().filter(|c| c.role == Role::Level && step > 0.0).map(|c| (c.psi / step).round() as i64).collect();
+    let mut levels: Vec<i64> = contours
+        .iter()
+        .filter(|c| c.role == Role::Level && step > 0.0)
+        .map(|c| (c.psi / step).round() as i64)
+        .collect();
     levels.sort_unstable();
     levels.dedup();
     let fits = |n: i64| levels.iter().filter(|k| *k % n == 0).count() <= MOST_LABELS;
@@ -129,7 +132,11 @@ pub fn draw_labels(
     let frame = ([plot.at[0] + 0.6, plot.at[1] + 0.6], [plot.at[0] + w - 0.6, plot.at[1] + h - 0.6]);
     let mut labelled: Vec<(f64, [f64; 2])> = Vec::new();
     let stride = label_stride(contours, step);
-    let wanted = |psi: f64| stride == 0.0 || ((psi / stride) - (psi / stride).round()).abs() < 1e-6 || ((psi / step) - (psi / step).round()).abs() > 1e-6;
+    let wanted = |psi: f64| {
+        stride == 0.0
+            || ((psi / stride) - (psi / stride).round()).abs() < 1e-6
+            || ((psi / step) - (psi / step).round()).abs() > 1e-6
+    };
     let mut order: Vec<&Contour> = contours.iter().filter(|c| c.role == Role::Level && wanted(c.psi)).collect();
     order.sort_by(|a, b| b.length.total_cmp(&a.length));
     for contour in order {

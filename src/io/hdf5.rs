@@ -40,8 +40,20 @@ fn names(role: &str) -> &'static [&'static str] {
 /// CF standard names of a role.
 fn standard_names(role: &str) -> &'static [&'static str] {
     match role {
-        "u" => &["x_wind", "eastward_wind", "sea_water_x_velocity", "eastward_sea_water_velocity", "surface_eastward_sea_water_velocity"],
-        "v" => &["y_wind", "northward_wind", "sea_water_y_velocity", "northward_sea_water_velocity", "surface_northward_sea_water_velocity"],
+        "u" => &[
+            "x_wind",
+            "eastward_wind",
+            "sea_water_x_velocity",
+            "eastward_sea_water_velocity",
+            "surface_eastward_sea_water_velocity",
+        ],
+        "v" => &[
+            "y_wind",
+            "northward_wind",
+            "sea_water_y_velocity",
+            "northward_sea_water_velocity",
+            "surface_northward_sea_water_velocity",
+        ],
         "x" => &["projection_x_coordinate"],
         "y" => &["projection_y_coordinate"],
         "t" => &["time"],
@@ -58,7 +70,11 @@ pub fn read_hdf5(path: &Path, request: &ArrayRequest) -> Result<RawFrame, IoErro
     hdf5::silence_errors(true);
     let size = std::fs::metadata(path).map_err(|e| IoError::system("read", path, e))?.len();
     let file = File::open(path).map_err(|e| {
-        IoError::content(path, "content", format!("the HDF5 library cannot open it (cut off, damaged or of a newer format?): {}", brief(&e)))
+        IoError::content(
+            path,
+            "content",
+            format!("the HDF5 library cannot open it (cut off, damaged or of a newer format?): {}", brief(&e)),
+        )
     })?;
     let matlab = starts_with(path, b"MATLAB 7.3");
     let mut all = Vec::new();
@@ -82,7 +98,8 @@ fn collect(path: &Path, group: &Group, depth: usize, out: &mut Vec<Dataset>) -> 
     if depth > 32 || out.len() > DATASET_LIMIT {
         return Ok(());
     }
-    let failed = |e: hdf5::Error| IoError::content(path, group.name(), format!("the tree cannot be read: {}", brief(&e)));
+    let failed =
+        |e: hdf5::Error| IoError::content(path, group.name(), format!("the tree cannot be read: {}", brief(&e)));
     out.extend(group.datasets().map_err(failed)?);
     for inner in group.groups().map_err(failed)? {
         collect(path, &inner, depth + 1, out)?;
@@ -102,16 +119,22 @@ fn text(dataset: &Dataset, name: &str) -> Option<String> {
     let kind = attribute.dtype().ok()?.to_descriptor().ok()?;
     let first = |list: Vec<String>| list.into_iter().next();
     match kind {
-        TypeDescriptor::VarLenUnicode => attribute
-            .read_scalar::<VarLenUnicode>()
-            .map(|t| t.to_string())
-            .ok()
-            .or_else(|| attribute.read_raw::<VarLenUnicode>().ok().and_then(|v| first(v.iter().map(ToString::to_string).collect()))),
-        TypeDescriptor::VarLenAscii => attribute
-            .read_scalar::<VarLenAscii>()
-            .map(|t| t.to_string())
-            .ok()
-            .or_else(|| attribute.read_raw::<VarLenAscii>().ok().and_then(|v| first(v.iter().map(ToString::to_string).collect()))),
+        TypeDescriptor::VarLenUnicode => {
+            attribute.read_scalar::<VarLenUnicode>().map(|t| t.to_string()).ok().or_else(|| {
+                attribute
+                    .read_raw::<VarLenUnicode>()
+                    .ok()
+                    .and_then(|v| first(v.iter().map(ToString::to_string).collect()))
+            })
+        }
+        TypeDescriptor::VarLenAscii => {
+            attribute.read_scalar::<VarLenAscii>().map(|t| t.to_string()).ok().or_else(|| {
+                attribute
+                    .read_raw::<VarLenAscii>()
+                    .ok()
+                    .and_then(|v| first(v.iter().map(ToString::to_string).collect()))
+            })
+        }
         TypeDescriptor::FixedAscii(_) => attribute.read_scalar::<FixedAscii<256>>().map(|t| t.to_string()).ok(),
         TypeDescriptor::FixedUnicode(_) => attribute.read_scalar::<FixedUnicode<256>>().map(|t| t.to_string()).ok(),
         _ => None,
@@ -174,7 +197,12 @@ impl Reader<'_> {
                 let list: Vec<String> = found.iter().map(|d| d.name()).collect();
                 Err(self.bad(
                     format!("array {role}"),
-                    format!("{} candidates: {}; say which with `--array {role}={}`", list.len(), list.join(", "), list[0]),
+                    format!(
+                        "{} candidates: {}; say which with `--array {role}={}`",
+                        list.len(),
+                        list.join(", "),
+                        list[0]
+                    ),
                 ))
             }
         }
@@ -188,7 +216,10 @@ impl Reader<'_> {
 
     fn needed(&self, role: &str) -> Result<&Dataset, IoError> {
         self.find(role)?.ok_or_else(|| {
-            self.bad(format!("array {role}"), format!("not found; the file holds {}; name it with `--array {role}=/path`", self.listing()))
+            self.bad(
+                format!("array {role}"),
+                format!("not found; the file holds {}; name it with `--array {role}=/path`", self.listing()),
+            )
         })
     }
 
@@ -196,7 +227,14 @@ impl Reader<'_> {
     fn guard(&self, dataset: &Dataset, values: usize) -> Result<(), IoError> {
         let kind = dataset.dtype().and_then(|d| d.to_descriptor());
         if let Ok(kind) = &kind
-            && !matches!(kind, TypeDescriptor::Integer(_) | TypeDescriptor::Unsigned(_) | TypeDescriptor::Float(_) | TypeDescriptor::Boolean | TypeDescriptor::Enum(_))
+            && !matches!(
+                kind,
+                TypeDescriptor::Integer(_)
+                    | TypeDescriptor::Unsigned(_)
+                    | TypeDescriptor::Float(_)
+                    | TypeDescriptor::Boolean
+                    | TypeDescriptor::Enum(_)
+            )
         {
             return Err(self.bad(format!("dataset {}", dataset.name()), format!("holds {kind}; expected real numbers")));
         }
@@ -204,7 +242,11 @@ impl Reader<'_> {
         if values > NODE_LIMIT || bytes / MOST_PER_BYTE > self.size.max(1) {
             return Err(self.bad(
                 format!("dataset {}", dataset.name()),
-                format!("claims shape {:?}, more than a file of {} bytes can hold (or than {NODE_LIMIT} nodes a frame)", dataset.shape(), self.size),
+                format!(
+                    "claims shape {:?}, more than a file of {} bytes can hold (or than {NODE_LIMIT} nodes a frame)",
+                    dataset.shape(),
+                    self.size
+                ),
             ));
         }
         Ok(())
@@ -213,7 +255,10 @@ impl Reader<'_> {
     /// Values of a selection, gaps as NaN, packing undone.
     fn values(&self, dataset: &Dataset, selection: Option<Selection>) -> Result<ArrayD<f64>, IoError> {
         let failed = |e: hdf5::Error| {
-            self.bad(format!("dataset {}", dataset.name()), format!("cannot be read (cut off, or a filter this build does not know): {}", brief(&e)))
+            self.bad(
+                format!("dataset {}", dataset.name()),
+                format!("cannot be read (cut off, or a filter this build does not know): {}", brief(&e)),
+            )
         };
         let mut values = match selection {
             Some(selection) => dataset.read_slice::<f64, _, IxDyn>(selection),
@@ -221,7 +266,8 @@ impl Reader<'_> {
         }
         .map_err(failed)?;
         let gaps: Vec<f64> = ["_FillValue", "missing_value"].into_iter().filter_map(|n| number(dataset, n)).collect();
-        let (scale, offset) = (number(dataset, "scale_factor").unwrap_or(1.0), number(dataset, "add_offset").unwrap_or(0.0));
+        let (scale, offset) =
+            (number(dataset, "scale_factor").unwrap_or(1.0), number(dataset, "add_offset").unwrap_or(0.0));
         values.mapv_inplace(|v| {
             // A fill value stored as f32 and compared as f64 may differ in its last digits.
             if gaps.iter().any(|g| v == *g || (v - g).abs() <= 1e-6 * g.abs()) { f64::NAN } else { v * scale + offset }
@@ -229,15 +275,29 @@ impl Reader<'_> {
         Ok(values)
     }
 
-    fn order(&self, dataset: &Dataset, matlab: bool, x: Option<&Dataset>, y: Option<&Dataset>, remarks: &mut Vec<Remark>) -> Result<Order, IoError> {
+    fn order(
+        &self,
+        dataset: &Dataset,
+        matlab: bool,
+        x: Option<&Dataset>,
+        y: Option<&Dataset>,
+        remarks: &mut Vec<Remark>,
+    ) -> Result<Order, IoError> {
         let shape = dataset.shape();
         let place = || format!("dataset {}", dataset.name());
         if let Some(order) = &self.request.order {
-            let letters: Vec<char> = order.chars().filter(|c| c.is_alphabetic()).map(|c| c.to_ascii_lowercase()).collect();
+            let letters: Vec<char> =
+                order.chars().filter(|c| c.is_alphabetic()).map(|c| c.to_ascii_lowercase()).collect();
             let at = |c: char| letters.iter().position(|l| *l == c);
             return match (at('y'), at('x'), letters.len() == shape.len()) {
                 (Some(y), Some(x), true) => Ok(Order { time: at('t'), y, x }),
-                _ => Err(IoError::setting("order", format!("`{order}` does not fit {} of shape {shape:?}; name every dimension once, for example t,y,x", dataset.name()))),
+                _ => Err(IoError::setting(
+                    "order",
+                    format!(
+                        "`{order}` does not fit {} of shape {shape:?}; name every dimension once, for example t,y,x",
+                        dataset.name()
+                    ),
+                )),
             };
         }
         let long: Vec<usize> = (0..shape.len()).filter(|&d| shape[d] != 1).collect();
@@ -246,7 +306,8 @@ impl Reader<'_> {
             (_, 2 | 3) => long.clone(),
             _ => return Err(self.bad(place(), format!("shape {shape:?}; expected (ny, nx) or (nt, ny, nx)"))),
         };
-        let length = |d: Option<&Dataset>| d.filter(|d| d.shape().iter().filter(|n| **n != 1).count() <= 1).map(|d| d.size());
+        let length =
+            |d: Option<&Dataset>| d.filter(|d| d.shape().iter().filter(|n| **n != 1).count() <= 1).map(|d| d.size());
         let (nx, ny) = (length(x), length(y));
         let fits = |yd: usize, xd: usize| nx.is_none_or(|n| n == shape[xd]) && ny.is_none_or(|n| n == shape[yd]);
         let spatial = |a: usize, b: usize, time: Option<usize>, remarks: &mut Vec<Remark>| -> Option<Order> {
@@ -281,7 +342,14 @@ impl Reader<'_> {
             _ => None,
         };
         found.ok_or_else(|| {
-            self.bad(place(), format!("shape {shape:?} does not fit {} positions in x and {} in y; say `--order`", nx.unwrap_or(0), ny.unwrap_or(0)))
+            self.bad(
+                place(),
+                format!(
+                    "shape {shape:?} does not fit {} positions in x and {} in y; say `--order`",
+                    nx.unwrap_or(0),
+                    ny.unwrap_or(0)
+                ),
+            )
         })
     }
 
@@ -301,13 +369,18 @@ impl Reader<'_> {
     fn plane(&self, dataset: &Dataset, order: Order) -> Result<Array2<f64>, IoError> {
         let shape = dataset.shape();
         if shape.len() <= order.x.max(order.y) {
-            return Err(self.bad(format!("dataset {}", dataset.name()), format!("shape {shape:?} does not fit that of u")));
+            return Err(
+                self.bad(format!("dataset {}", dataset.name()), format!("shape {shape:?} does not fit that of u"))
+            );
         }
         let (ny, nx) = (shape[order.y], shape[order.x]);
         self.guard(dataset, ny.saturating_mul(nx))?;
         let frames = order.time.map_or(1, |t| shape[t]);
         if self.request.frame >= frames.max(1) {
-            return Err(self.bad(format!("frame {}", self.request.frame), format!("{} holds {frames} frames, counted from 0", dataset.name())));
+            return Err(self.bad(
+                format!("frame {}", self.request.frame),
+                format!("{} holds {frames} frames, counted from 0", dataset.name()),
+            ));
         }
         let slices: Vec<SliceOrIndex> = (0..shape.len())
             .map(|d| {
@@ -336,12 +409,16 @@ impl Reader<'_> {
         }
         let (u, v) = (self.needed("u")?, self.needed("v")?);
         if u.shape() != v.shape() {
-            return Err(self.bad("arrays u, v", format!("shapes differ: {} {:?}, {} {:?}", u.name(), u.shape(), v.name(), v.shape())));
+            return Err(self.bad(
+                "arrays u, v",
+                format!("shapes differ: {} {:?}, {} {:?}", u.name(), u.shape(), v.name(), v.shape()),
+            ));
         }
         let (x, y) = (self.find("x")?, self.find("y")?);
         for (role, coordinate) in [("x", x), ("y", y)] {
             if let Some(c) = coordinate {
-                self.guard(c, c.size()).map_err(|e| if c.size() == 0 { self.bad(format!("array {role}"), "is empty") } else { e })?;
+                self.guard(c, c.size())
+                    .map_err(|e| if c.size() == 0 { self.bad(format!("array {role}"), "is empty") } else { e })?;
             }
         }
         let mut remarks = Vec::new();
@@ -351,13 +428,20 @@ impl Reader<'_> {
             v: self.plane(v, order)?,
             frame: self.request.frame,
             frames: order.time.map_or(1, |t| u.shape()[t]),
-            format: format!("HDF5{}{}", if matlab { " (MATLAB 7.3)" } else { "" }, if u.is_chunked() { ", chunked" } else { "" }),
+            format: format!(
+                "HDF5{}{}",
+                if matlab { " (MATLAB 7.3)" } else { "" },
+                if u.is_chunked() { ", chunked" } else { "" }
+            ),
             ..RawFrame::default()
         };
         out.found = vec![("u".to_owned(), describe(u)), ("v".to_owned(), describe(v))];
         out.units = RawUnits { velocity: text(u, "units").or_else(|| text(v, "units")), length: None, time: None };
         if order.x < order.y {
-            remarks.push(Remark::new(RemarkKind::DimensionsReordered, "the arrays are stored as (x, y); they were turned to (y, x)"));
+            remarks.push(Remark::new(
+                RemarkKind::DimensionsReordered,
+                "the arrays are stored as (x, y); they were turned to (y, x)",
+            ));
         }
         for (role, coordinate, n) in [("x", x, out.u.ncols()), ("y", y, out.u.nrows())] {
             let Some(dataset) = coordinate else { continue };
@@ -371,12 +455,17 @@ impl Reader<'_> {
                 if values.len() != n {
                     return Err(self.bad(
                         format!("dataset {}", dataset.name()),
-                        format!("{} positions in {role} for {n} nodes; say `--order` if the arrays are transposed", values.len()),
+                        format!(
+                            "{} positions in {role} for {n} nodes; say `--order` if the arrays are transposed",
+                            values.len()
+                        ),
                     ));
                 }
                 RawAxis::Line(values.iter().copied().collect())
             } else {
-                RawAxis::Mesh(self.plane(dataset, Order { time: None, ..order }).or_else(|_| self.plane(dataset, order))?)
+                RawAxis::Mesh(
+                    self.plane(dataset, Order { time: None, ..order }).or_else(|_| self.plane(dataset, order))?,
+                )
             };
             if role == "x" { out.x = Some(axis) } else { out.y = Some(axis) }
         }
@@ -397,7 +486,8 @@ impl Reader<'_> {
             };
             let array = self.plane(dataset, if dims == u.shape().len() { order } else { drop_time })?;
             if array.dim() != shape {
-                return Err(self.bad(format!("dataset {}", dataset.name()), format!("shape {:?}; u has {shape:?}", array.dim())));
+                return Err(self
+                    .bad(format!("dataset {}", dataset.name()), format!("shape {:?}; u has {shape:?}", array.dim())));
             }
             out.found.push((role.to_owned(), describe(dataset)));
             match role {
