@@ -268,6 +268,9 @@ fn parse(path: &Path, name: &str, bytes: &[u8]) -> Result<(ArrayD<f64>, String),
         .and_then(Result::ok);
     let shape = shape.ok_or_else(|| bad("the header names no shape".to_owned()))?;
     let kind = &descr[descr.len().min(1)..];
+    if !kind.starts_with(['f', 'i', 'u', 'b']) {
+        return Err(bad(format!("element type `{descr}`; expected real numbers (f2 to f8, integers, bool)")));
+    }
     let size: usize = kind.get(1..).and_then(|s| s.parse().ok()).unwrap_or(0);
     let data = &bytes[start + length..];
     let count = shape.iter().try_fold(1usize, |n, &d| n.checked_mul(d));

@@ -69,7 +69,7 @@ impl Default for FitOptions {
 pub enum FitError {
     /// No two neighbouring nodes carry a vector.
     #[error(
-        "no two neighbouring nodes carry a usable vector ({valid} usable vectors in all): there is nothing to integrate along"
+        "no two neighboring nodes carry a usable vector ({valid} usable vectors in all): there is nothing to integrate along"
     )]
     NoEdges {
         /// Usable vectors.
