@@ -185,8 +185,12 @@ const OVERLAP_SIZES: [usize; 6] = [1, 2, 3, 4, 6, 8];
 const SIGMA_TRUNCATION: f64 = 0.25;
 /// Squared outflows beyond this many standard deviations are left out of the estimate of sigma.
 const CLIP: f64 = 3.5;
+/// Smallest boxes from which sigma is estimated.
+const LEVEL_SAMPLE: usize = 1 << 17;
 /// Boxes from which degrees of freedom are computed.
 const SAMPLE: usize = 48;
+/// Boxes from which the degrees of freedom of that estimate are computed.
+const OVERLAP_DEGREES: usize = 6;
 /// Boxes of one size from which the overlap is estimated.
 const OVERLAP_SAMPLE: usize = 2000;
 /// Relative rounding of the data: noise is never taken as smaller than this times the rms speed.
@@ -200,19 +204,17 @@ const ROUNDING: f64 = 1e-14;
 /// * Without a declared sigma only the growth of outflow with box size is judged; without a declared overlap it is estimated and
 ///   a rejection must hold for a large overlap too.
 pub fn check_divergence(field: &VelocityField, options: &DivergenceOptions) -> DivergenceReport {
-    let outflows = Outflows::new(field);
+    let mut outflows = Outflows::new(field);
     let estimate = field.overlap.is_none().then(|| estimate_overlap(&outflows)).flatten();
     let overlap = field.overlap.or(estimate.map(|e| e.overlap)).unwrap_or(0.0);
     let sigma_declared = field.sigma.rms(&field.valid);
-    let test = BoxTest::new(field, &outflows, options, overlap);
+    let test = BoxTest::new(field, &mut outflows, options, overlap);
     let maps = gradient_maps(field, overlap);
     let scale = if sigma_declared.is_some() { 1.0 } else { test.level.map_or(f64::NAN, |l| l.scale) };
     let (divergence_rms, divergence_noise) = maps.divergence_rms(scale);
-    let growth_holds = |outflows: &Outflows| {
-        let large = BoxTest::new(field, outflows, options, LARGE_OVERLAP);
-        large.p_growth < options.significance
-    };
-    let (verdict, reason) = test.verdict(options, field.overlap.is_some(), || growth_holds(&outflows));
+    let (verdict, reason) = test.verdict(options, field.overlap.is_some(), || {
+        BoxTest::new(field, &mut outflows, options, LARGE_OVERLAP).p_growth < options.significance
+    });
     let unit = match &field.sigma {
         Sigma::Unknown => 1.0,
         _ => sigma_declared.unwrap_or(1.0),
@@ -257,7 +259,8 @@ pub struct BoxMap {
 /// `scale`: noise level as a multiple of the declared sigma, or sigma itself when none is declared.
 pub fn box_map(field: &VelocityField, size: usize, overlap: f64, scale: f64) -> BoxMap {
     let size = size.max(1);
-    let outflows = Outflows::new(field);
+    let mut outflows = Outflows::new(field);
+    outflows.allow_jumps(scale);
     let (shape, (j0, i0)) = outflows.layout(size);
     let edges = |axis: &Axis, first: usize, count: usize| (0..=count).map(|k| axis.at(first + k * size)).collect();
     let mut map = BoxMap {
@@ -267,9 +270,9 @@ pub fn box_map(field: &VelocityField, size: usize, overlap: f64, scale: f64) -> 
         outflow: Array2::from_elem(shape, f64::NAN),
         z: Array2::from_elem(shape, f64::NAN),
     };
-    for tile in outflows.tiles(size, &outflows.places(size), &Correlation::new(overlap), scale) {
+    for tile in outflows.tiles(size, &outflows.places(size), &Correlation::new(overlap)) {
         map.outflow[tile.place] = tile.outflow;
-        map.z[tile.place] = tile.outflow / tile.total_variance(scale).sqrt();
+        map.z[tile.place] = tile.outflow / tile.weight_variance(scale).sqrt();
     }
     map
 }
@@ -291,7 +294,7 @@ struct BoxTest {
 }
 
 impl BoxTest {
-    fn new(field: &VelocityField, outflows: &Outflows, options: &DivergenceOptions, overlap: f64) -> Self {
+    fn new(field: &VelocityField, outflows: &mut Outflows, options: &DivergenceOptions, overlap: f64) -> Self {
         let rho = Correlation::new(overlap);
         let declared = field.sigma != Sigma::Unknown;
         let sizes: Vec<(usize, Vec<(usize, usize)>)> = options
@@ -305,21 +308,19 @@ impl BoxTest {
             return Self { scales: Vec::new(), level: None, p: f64::NAN, p_growth: f64::NAN, declared };
         };
         let rounding = (ROUNDING * field.rms_speed() * field.grid().spacing()).powi(2);
-        let smallest_tiles = outflows.tiles(1, smallest, &rho, f64::INFINITY);
         let nu = degrees(outflows, 1, smallest, &rho, SAMPLE);
-        let level = noise_level(&smallest_tiles, nu, rounding);
+        let chosen = spread(smallest, LEVEL_SAMPLE);
+        let share = chosen.len() as f64 / smallest.len() as f64;
+        let level = noise_level(&outflows.tiles(1, &chosen, &rho), nu * share, rounding);
         let used = if declared { 1.0 } else { level.scale };
+        outflows.allow_jumps(used);
         let mut scales = Vec::new();
         let mut growth = Vec::new();
         let mut base = f64::NAN;
         for (m, places) in &sizes {
-            let tiles = outflows.tiles(*m, places, &rho, used);
             let nu = if *m == 1 { nu } else { degrees(outflows, *m, places, &rho, SAMPLE) };
-            let statistic = |scale: f64| {
-                mean(&tiles, |t| t.outflow * t.outflow / (t.total_variance(scale) + rounding * (4 * m) as f64))
-            };
-            let t = statistic(used);
-            let free = statistic(level.scale);
+            let sums = Sums::new(outflows, *m, places, &rho, [used, level.scale], rounding);
+            let [t, free] = sums.statistic;
             if *m == 1 {
                 base = nu;
             }
@@ -327,17 +328,16 @@ impl BoxTest {
                 if *m == 1 { f64::NAN } else { FisherSnedecor::new(nu, base).map_or(f64::NAN, |f| f.sf(free)) };
             let p = if declared { ChiSquared::new(nu).map_or(f64::NAN, |c| c.sf(nu * t)) } else { p_free };
             growth.push(p_free);
-            let noise = mean(&tiles, |t| t.variance) * used * used;
-            let truncation = mean(&tiles, |t| t.truncation(used));
+            let noise = sums.variance * used * used;
             scales.push(ScaleResult {
                 size: *m,
-                boxes: tiles.len(),
-                outflow_rms: mean(&tiles, |t| t.outflow * t.outflow).sqrt(),
+                boxes: places.len(),
+                outflow_rms: sums.square.sqrt(),
                 noise_rms: noise.sqrt(),
                 statistic: t,
                 degrees: nu,
                 p,
-                truncation_share: truncation / (truncation + noise),
+                truncation_share: sums.truncation / (sums.truncation + noise),
             });
         }
         let p: Vec<f64> = scales.iter().map(|s| s.p).collect();
@@ -374,6 +374,55 @@ impl BoxTest {
     }
 }
 
+/// Means over the boxes of one size.
+struct Sums {
+    /// Mean squared outflow over its expectation, both weighted by the inverse variance, for two noise scales.
+    statistic: [f64; 2],
+    square: f64,
+    variance: f64,
+    /// For the first noise scale.
+    truncation: f64,
+}
+
+impl Sums {
+    /// Boxes held in memory at a time; fixed, so that sums do not depend on threads.
+    const CHUNK: usize = 1 << 16;
+
+    fn new(
+        outflows: &Outflows,
+        m: usize,
+        places: &[(usize, usize)],
+        rho: &Correlation,
+        scales: [f64; 2],
+        rounding: f64,
+    ) -> Self {
+        let floor = rounding * (4 * m) as f64;
+        let mut seen = [0.0; 2];
+        let mut expected = [0.0; 2];
+        let (mut square, mut variance, mut truncation) = (0.0, 0.0, 0.0);
+        for chunk in places.chunks(Self::CHUNK) {
+            for t in outflows.tiles(m, chunk, rho) {
+                let o2 = t.outflow * t.outflow;
+                for (k, scale) in scales.into_iter().enumerate() {
+                    let weight = 1.0 / (t.weight_variance(scale) + floor);
+                    seen[k] += weight * o2;
+                    expected[k] += weight * (t.expected(scale) + floor);
+                }
+                square += o2;
+                variance += t.variance;
+                truncation += t.truncation(scales[0]);
+            }
+        }
+        let n = places.len() as f64;
+        Self {
+            statistic: [seen[0] / expected[0], seen[1] / expected[1]],
+            square: square / n,
+            variance: variance / n,
+            truncation: truncation / n,
+        }
+    }
+}
+
 fn mean(tiles: &[Tile], f: impl Fn(&Tile) -> f64) -> f64 {
     tiles.iter().map(f).sum::<f64>() / tiles.len() as f64
 }
@@ -395,7 +444,7 @@ fn noise_level(tiles: &[Tile], nu: f64, rounding: f64) -> Level {
         let clean: Vec<f64> = tiles
             .iter()
             .zip(&all)
-            .filter(|(t, _)| t.allowance <= SIGMA_TRUNCATION * square * t.variance)
+            .filter(|(t, _)| t.truncation(square.sqrt()) <= SIGMA_TRUNCATION * square * t.variance)
             .map(|(_, z)| *z)
             .collect();
         share = clean.len() as f64 / all.len() as f64;
@@ -509,7 +558,7 @@ fn estimate_overlap(outflows: &Outflows) -> Option<OverlapEstimate> {
                     }
                 }
             }
-            let tiles = outflows.tiles(m, &chosen, &white, f64::INFINITY);
+            let tiles = outflows.tiles(m, &chosen, &white);
             let squares = tiles.iter().map(|t| t.outflow * t.outflow).collect();
             Size { m, places, chosen, squares, lags }
         })
@@ -517,13 +566,28 @@ fn estimate_overlap(outflows: &Outflows) -> Option<OverlapEstimate> {
     if sizes.len() < 2 {
         return None;
     }
+    // Degrees of freedom only weigh the sizes: a few overlaps, linear between them.
+    const KNOTS: [f64; 4] = [0.0, 0.5, 0.75, LARGE_OVERLAP];
+    let freedom: Vec<[f64; 4]> = sizes
+        .iter()
+        .map(|s| {
+            KNOTS.map(|overlap| {
+                let nu = degrees(outflows, s.m, &s.places, &Correlation::new(overlap), OVERLAP_DEGREES);
+                nu * s.chosen.len() as f64 / s.places.len() as f64
+            })
+        })
+        .collect();
+    let interpolate = |nu: &[f64; 4], overlap: f64| {
+        let k = KNOTS.partition_point(|knot| *knot < overlap).clamp(1, KNOTS.len() - 1);
+        nu[k - 1] + (nu[k] - nu[k - 1]) * (overlap - KNOTS[k - 1]) / (KNOTS[k] - KNOTS[k - 1])
+    };
     let mut best: Option<OverlapEstimate> = None;
     let steps = (LARGE_OVERLAP / OVERLAP_STEP).round() as usize;
     for step in 0..=steps {
         let overlap = step as f64 * OVERLAP_STEP;
         let rho = Correlation::new(overlap);
         let (mut weights, mut logs) = (Vec::new(), Vec::new());
-        for size in &sizes {
+        for (size, nu) in sizes.iter().zip(&freedom) {
             let mut variance = 0.0;
             for (dy, row) in size.lags.iter().enumerate() {
                 for (dx, c) in row.iter().enumerate() {
@@ -531,9 +595,7 @@ fn estimate_overlap(outflows: &Outflows) -> Option<OverlapEstimate> {
                 }
             }
             variance /= size.chosen.len() as f64;
-            let nu =
-                degrees(outflows, size.m, &size.places, &rho, 6) * size.chosen.len() as f64 / size.places.len() as f64;
-            weights.push(2.0 * nu);
+            weights.push(2.0 * interpolate(nu, overlap));
             logs.push(0.5 * (clipped_mean_square(&size.squares) / variance).ln());
         }
         let total: f64 = weights.iter().sum();
@@ -604,7 +666,7 @@ mod tests {
             let rho = Correlation::new(overlap);
             for (k, m) in [1, 2, 4, 8, 16].into_iter().enumerate() {
                 let places = outflows.places(m);
-                let tiles = outflows.tiles(m, &places, &rho, 1.0);
+                let tiles = outflows.tiles(m, &places, &rho);
                 let mean_sd = mean(&tiles, |t| t.variance).sqrt() * 64.0;
                 approx::assert_relative_eq!(mean_sd, sd[k], max_relative = 0.02);
                 if k < 4 {
@@ -632,13 +694,13 @@ mod tests {
             for m in [1, 4] {
                 let outflows = Outflows::new(&f);
                 let places = outflows.places(m);
-                let expected = outflows.tiles(m, &places, &rho, 1.0);
+                let expected = outflows.tiles(m, &places, &rho);
                 let mut sums = vec![0.0; places.len()];
                 let mut allowance = 0.0;
                 for member in 0..400 {
                     let (u, v) = source.of_field(&f, member);
                     let noise = VelocityField { u, v, ..f.clone() };
-                    for (sum, t) in sums.iter_mut().zip(Outflows::new(&noise).tiles(m, &places, &rho, 1.0)) {
+                    for (sum, t) in sums.iter_mut().zip(Outflows::new(&noise).tiles(m, &places, &rho)) {
                         *sum += t.outflow * t.outflow / 400.0;
                         allowance += t.allowance / t.allowance_noise / (400 * places.len()) as f64;
                     }
@@ -666,7 +728,7 @@ mod tests {
         let outflows = Outflows::new(&f);
         let rho = Correlation::new(0.0);
         for m in [1, 2, 4] {
-            for t in outflows.tiles(m, &outflows.places(m), &rho, 1.0) {
+            for t in outflows.tiles(m, &outflows.places(m), &rho) {
                 approx::assert_abs_diff_eq!(t.outflow, 0.75 * (m as f64 / 16.0).powi(2), epsilon = 1e-13);
                 approx::assert_abs_diff_eq!(t.allowance, 0.0, epsilon = 1e-20);
             }

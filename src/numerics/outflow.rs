@@ -1,6 +1,7 @@
 //! Outflow of cells and of tiles of cells from the edge fluxes, with its noise and the allowance for its truncation error.
 
-use ndarray::{Array2, ArrayView2};
+use ndarray::{Array2, ArrayView2, Zip};
+use rayon::prelude::*;
 
 use super::flux::{EdgeRules, edge_fluxes_of};
 use super::noise::{Component, Correlation, NodeSigma, Term, covariance};
@@ -21,6 +22,9 @@ const JUMP_SHARE: f64 = 0.5;
 
 /// White-noise standard deviation of a third difference for unit sigma, `sqrt(1 + 9 + 9 + 1)`.
 const THIRD_DIFFERENCE_NOISE: f64 = 4.472_135_954_999_58;
+
+/// An allowance counts as truncation, not noise, from this many times its expectation from noise.
+pub(super) const ALLOWANCE_NOISE: f64 = 4.0;
 
 /// Share of the cells of a tile that must be usable for the tile to count (with its usable cells only).
 const TILE_SHARE: f64 = 0.5;
@@ -100,31 +104,43 @@ fn integral_weights(nodes: &[f64], b: f64) -> Vec<f64> {
 struct Edges {
     values: Array2<f64>,
     flux: Array2<f64>,
+    /// Higher-order flux minus `flux`, NaN where no higher rule fits.
+    correction: Array2<f64>,
+    /// Allowance for unresolved steps, empty while none is made.
+    jump: Array2<f64>,
+    pattern: Array2<u8>,
     rules: EdgeRules,
     corrections: Corrections,
-    uniform_axis: bool,
+    axis: Axis,
     sigma: NodeSigma,
     across_first: bool,
 }
 
 impl Edges {
-    fn pattern(&self, k: usize, c: usize) -> usize {
-        let usable = |m: Option<usize>| m.is_some_and(|m| m < self.values.nrows() && self.values[[m, c]].is_finite());
-        Corrections::pattern(
-            usable(k.checked_sub(2)),
-            usable(k.checked_sub(1)),
-            usable(Some(k + 2)),
-            usable(Some(k + 3)),
-        )
-    }
-
-    fn correction(&self, k: usize, c: usize) -> Option<&Correction> {
-        self.corrections.table[k][self.pattern(k, c)].as_ref()
-    }
-
-    /// Nodes of a correction with their weights.
-    fn correction_terms<'a>(&self, k: usize, correction: &'a Correction) -> impl Iterator<Item = (usize, f64)> + 'a {
-        correction.iter().enumerate().filter(|(_, w)| **w != 0.0).map(move |(m, w)| (k + m - PAD, *w))
+    fn new(
+        values: Array2<f64>,
+        flux: Array2<f64>,
+        axis: &Axis,
+        rules: EdgeRules,
+        sigma: NodeSigma,
+        across_first: bool,
+    ) -> Self {
+        let corrections = Corrections::new(axis, &rules);
+        let mut pattern = Array2::zeros(flux.dim());
+        let mut correction = Array2::from_elem(flux.dim(), f64::NAN);
+        Zip::indexed(pattern.rows_mut()).and(correction.rows_mut()).par_for_each(|k, mut pattern, mut correction| {
+            for c in 0..pattern.len() {
+                let usable = |m: Option<usize>| m.is_some_and(|m| m < values.nrows() && values[[m, c]].is_finite());
+                let around = [k.checked_sub(2), k.checked_sub(1), Some(k + 2), Some(k + 3)].map(usable);
+                let found = Corrections::pattern(around[0], around[1], around[2], around[3]);
+                pattern[c] = found as u8;
+                if let Some(weights) = &corrections.table[k][found] {
+                    correction[c] = correction_terms(k, weights).map(|(n, w)| w * values[[n, c]]).sum();
+                }
+            }
+        });
+        let jump = Array2::zeros((0, 0));
+        Self { values, flux, correction, jump, pattern, rules, corrections, axis: axis.clone(), sigma, across_first }
     }
 
     fn sigma_at(&self, k: usize, c: usize) -> f64 {
@@ -133,7 +149,7 @@ impl Edges {
 
     /// Allowance for a step the grid does not resolve: half the step times its length, faded out by the square of the ratio of
     /// third to first difference where the flow is resolved; 0 where the third difference is within `scale` times the noise.
-    fn jump(&self, k: usize, c: usize, length: f64, scale: f64) -> f64 {
+    fn jump_at(&self, k: usize, c: usize, scale: f64) -> f64 {
         let f = |m: usize| self.values[[m, c]];
         let mut third: f64 = 0.0;
         for start in k.saturating_sub(2)..=k {
@@ -145,11 +161,42 @@ impl Edges {
         let noise = self.sigma_at(k, c).max(self.sigma_at(k + 1, c)) * scale * THIRD_DIFFERENCE_NOISE;
         let step = (f(k + 1) - f(k)).abs();
         if step > 0.0 && third > JUMP_LIMIT * noise {
-            JUMP_SHARE * length * step * (third / step).powi(2).min(1.0)
+            JUMP_SHARE * self.axis.spacing(k) * step * (third / step).powi(2).min(1.0)
         } else {
             0.0
         }
     }
+
+    fn allow_jumps(&mut self, scale: f64) {
+        let mut jump = Array2::zeros(self.flux.dim());
+        Zip::indexed(jump.rows_mut()).par_for_each(|k, mut row| {
+            for c in 0..row.len() {
+                if self.flux[[k, c]].is_finite() {
+                    row[c] = self.jump_at(k, c, scale);
+                }
+            }
+        });
+        self.jump = jump;
+    }
+
+    /// Noise variance of the correction of an edge.
+    fn correction_noise(&self, k: usize, c: usize, rho: &Correlation) -> f64 {
+        let Some(weights) = &self.corrections.table[k][self.pattern[[k, c]] as usize] else {
+            return 0.0;
+        };
+        let mut sum = 0.0;
+        for (a, wa) in correction_terms(k, weights) {
+            for (b, wb) in correction_terms(k, weights) {
+                sum += wa * wb * self.sigma_at(a, c) * self.sigma_at(b, c) * rho.at(a.abs_diff(b));
+            }
+        }
+        sum
+    }
+}
+
+/// Nodes of a correction with their weights.
+fn correction_terms(k: usize, correction: &Correction) -> impl Iterator<Item = (usize, f64)> + '_ {
+    correction.iter().enumerate().filter(|(_, w)| **w != 0.0).map(move |(m, w)| (k + m - PAD, *w))
 }
 
 /// Sums over one tile.
@@ -170,16 +217,21 @@ pub(super) struct Tile {
 }
 
 impl Tile {
-    /// Variance of the outflow when noise is `scale` times the sigma of the field: noise plus truncation.
-    pub fn total_variance(&self, scale: f64) -> f64 {
-        let noise = self.variance * scale * scale;
-        // Keep the noise part of the allowance out, but never more than a tenth of the variance.
-        noise + self.jumps + (self.allowance - self.allowance_noise * scale * scale).max(-0.1 * noise)
+    /// Expected squared outflow when noise is `scale` times the sigma of the field: noise plus truncation, right on average over
+    /// the noise (single tiles may scatter below the noise variance).
+    pub fn expected(&self, scale: f64) -> f64 {
+        self.variance * scale * scale + self.jumps + self.allowance - self.allowance_noise * scale * scale
     }
 
-    /// Truncation part of [`Self::total_variance`], not negative.
+    /// Variance by which the tile is weighted: that of noise, plus truncation where it stands out of what noise puts into its
+    /// allowance, so that the weight does not follow the noise.
+    pub fn weight_variance(&self, scale: f64) -> f64 {
+        self.variance * scale * scale + self.truncation(scale)
+    }
+
+    /// Truncation that stands out of the noise in its estimate.
     pub fn truncation(&self, scale: f64) -> f64 {
-        self.jumps + (self.allowance - self.allowance_noise * scale * scale).max(0.0)
+        self.jumps + (self.allowance - ALLOWANCE_NOISE * self.allowance_noise * scale * scale).max(0.0)
     }
 }
 
@@ -206,30 +258,21 @@ impl Outflows {
         let (u, v) = (weighted(&field.u), weighted(&field.v));
         let (rules_x, rules_y) = (EdgeRules::new(&grid.x), EdgeRules::new(&grid.y));
         let fluxes = edge_fluxes_of(&u, &v, &rules_x, &rules_y);
-        let u = Edges {
-            values: u,
-            flux: fluxes.along_y,
-            corrections: Corrections::new(&grid.y, &rules_y),
-            rules: rules_y,
-            uniform_axis: grid.y.is_uniform(),
-            sigma: NodeSigma::of(field, Component::U),
-            across_first: false,
-        };
-        let v = Edges {
-            values: turned(v.view()),
-            flux: turned(fluxes.along_x.view()).mapv_into(|q| -q),
-            corrections: Corrections::new(&grid.x, &rules_x),
-            rules: rules_x,
-            uniform_axis: grid.x.is_uniform(),
-            sigma: NodeSigma::of(field, Component::V),
-            across_first: true,
-        };
-        let ok = |e: &Edges, k: usize, c: usize| e.flux[[k, c]].is_finite() && e.correction(k, c).is_some();
+        let u = Edges::new(u, fluxes.along_y, &grid.y, rules_y, NodeSigma::of(field, Component::U), false);
+        let (v, flux) = (turned(v.view()), turned(fluxes.along_x.view()).mapv_into(|q| -q));
+        let v = Edges::new(v, flux, &grid.x, rules_x, NodeSigma::of(field, Component::V), true);
+        let ok = |e: &Edges, k: usize, c: usize| e.flux[[k, c]].is_finite() && e.correction[[k, c]].is_finite();
         let (ny, nx) = grid.shape();
         let usable = Array2::from_shape_fn((ny - 1, nx - 1), |(j, i)| {
             ok(&u, j, i) && ok(&u, j, i + 1) && ok(&v, i, j) && ok(&v, i, j + 1)
         });
         Self { u, v, usable }
+    }
+
+    /// Allows for steps the grid does not resolve, judged against noise of `scale` times the sigma of the field.
+    pub fn allow_jumps(&mut self, scale: f64) {
+        self.u.allow_jumps(scale);
+        self.v.allow_jumps(scale);
     }
 
     /// Places of the tiles of `m` by `m` cells that count, row by row: at least half of their cells are usable.  Tiles do not
@@ -285,7 +328,7 @@ impl Outflows {
         buffer.clear();
         buffer.resize(along * across, 0.0);
         self.outline(edges, m, place, |k, c, sign| {
-            let pattern = edges.pattern(k, c);
+            let pattern = edges.pattern[[k, c]];
             for (node, w) in edges.rules.of(k, pattern & 8 != 0, pattern & 4 != 0).terms() {
                 buffer[(node + PAD - k0) * across + c - c0] += sign * w;
             }
@@ -308,8 +351,11 @@ impl Outflows {
 
     /// The nodes a tile depends on, of u and of v.
     pub fn tile_terms(&self, m: usize, place: (usize, usize)) -> [Vec<Term>; 2] {
-        let mut buffer = Vec::new();
-        [self.terms(&self.u, m, place, &mut buffer), self.terms(&self.v, m, place, &mut buffer)]
+        self.tile_terms_in(m, place, &mut Vec::new())
+    }
+
+    fn tile_terms_in(&self, m: usize, place: (usize, usize), buffer: &mut Vec<f64>) -> [Vec<Term>; 2] {
+        [self.terms(&self.u, m, place, buffer), self.terms(&self.v, m, place, buffer)]
     }
 
     /// Covariance of the outflows of two tiles from their terms.
@@ -325,7 +371,7 @@ impl Outflows {
     /// Whether the noise of a tile is that of any other complete tile of its size: equal spacing and sigma, every cell usable,
     /// every rule the regular one.
     fn is_regular(&self, m: usize, place: (usize, usize)) -> bool {
-        let even = |e: &Edges| e.uniform_axis && e.sigma.uniform().is_some();
+        let even = |e: &Edges| e.axis.is_uniform() && e.sigma.uniform().is_some();
         if !(even(&self.u) && even(&self.v)) {
             return false;
         }
@@ -335,59 +381,46 @@ impl Outflows {
         }
         let mut regular = true;
         for edges in [&self.u, &self.v] {
-            self.outline(edges, m, place, |k, c, _| regular &= edges.pattern(k, c) == Corrections::FULL);
+            self.outline(edges, m, place, |k, c, _| regular &= usize::from(edges.pattern[[k, c]]) == Corrections::FULL);
         }
         regular
     }
 
-    /// Sums over all tiles of a size; `scale` as in [`Tile::total_variance`], for the judgment of unresolved steps.
-    pub fn tiles(&self, m: usize, places: &[(usize, usize)], rho: &Correlation, scale: f64) -> Vec<Tile> {
-        use rayon::prelude::*;
-        let exact = |place: (usize, usize)| {
-            let terms = self.tile_terms(m, place);
+    /// Sums over the given tiles of a size.
+    pub fn tiles(&self, m: usize, places: &[(usize, usize)], rho: &Correlation) -> Vec<Tile> {
+        let exact = |place: (usize, usize), buffer: &mut Vec<f64>| {
+            let terms = self.tile_terms_in(m, place, buffer);
             self.tile_covariance(&terms, &terms, rho)
         };
         let regular: Vec<bool> = places.par_iter().map(|&place| self.is_regular(m, place)).collect();
-        let shared = regular.iter().position(|r| *r).map_or(f64::NAN, |k| exact(places[k]));
-        let correction_noise = |edges: &Edges, k: usize, c: usize, correction: &Correction| {
-            let terms = || edges.correction_terms(k, correction);
-            let mut sum = 0.0;
-            for (a, wa) in terms() {
-                for (b, wb) in terms() {
-                    sum += wa * wb * edges.sigma_at(a, c) * edges.sigma_at(b, c) * rho.at(a.abs_diff(b));
-                }
-            }
-            sum
-        };
+        let shared = regular.iter().position(|r| *r).map_or(f64::NAN, |k| exact(places[k], &mut Vec::new()));
         let regular_noise: [f64; 2] = [&self.u, &self.v].map(|e| {
-            let k = e.corrections.table.len() / 2;
-            let correction = e.corrections.table[k][Corrections::FULL];
-            correction.filter(|_| e.sigma.uniform().is_some()).map_or(f64::NAN, |c| correction_noise(e, k, 0, &c))
+            let full = |(_, p): &((usize, usize), &u8)| usize::from(**p) == Corrections::FULL;
+            let any = e.pattern.indexed_iter().find(full);
+            any.map_or(f64::NAN, |((k, c), _)| e.correction_noise(k, c, rho))
         });
         places
             .par_iter()
             .zip(&regular)
-            .map(|(&place, &is_regular)| {
+            .map_init(Vec::new, |buffer, (&place, &is_regular)| {
                 let (mut outflow, mut signed, mut squares, mut noise, mut jumps) = (0.0, 0.0, 0.0, 0.0, 0.0);
                 for (edges, regular_noise) in [&self.u, &self.v].into_iter().zip(regular_noise) {
+                    let with_jumps = !edges.jump.is_empty();
                     self.outline(edges, m, place, |k, c, sign| {
+                        let correction = edges.correction[[k, c]];
                         outflow += sign * edges.flux[[k, c]];
-                        if let Some(correction) = edges.correction(k, c) {
-                            let sum: f64 =
-                                edges.correction_terms(k, correction).map(|(n, w)| w * edges.values[[n, c]]).sum();
-                            signed += sign * sum;
-                            squares += sum * sum;
-                            noise += if is_regular { regular_noise } else { correction_noise(edges, k, c, correction) };
-                            let rule = edges.rules.of(k, false, false);
-                            let length = 2.0 * rule.coefficient[0];
-                            jumps += edges.jump(k, c, length, scale).powi(2);
+                        signed += sign * correction;
+                        squares += correction * correction;
+                        noise += if is_regular { regular_noise } else { edges.correction_noise(k, c, rho) };
+                        if with_jumps {
+                            jumps += edges.jump[[k, c]].powi(2);
                         }
                     });
                 }
                 Tile {
                     place,
                     outflow,
-                    variance: if is_regular { shared } else { exact(place) },
+                    variance: if is_regular { shared } else { exact(place, buffer) },
                     allowance: TRUNCATION_FACTOR * (signed * signed + squares),
                     // Noise of the signed sum and of the sum of squares is the same for independent edges.
                     allowance_noise: 2.0 * TRUNCATION_FACTOR * noise,

@@ -628,8 +628,10 @@ mod tests {
     #[test]
     fn no_more_than_the_stated_share_is_rejected_and_the_report_says_so() {
         let mut f = sampled(20, |_, _| (1.0, 0.0));
-        for k in 0..80 {
-            f.u[[(k * 7) % 20, (k * 11 + k / 20) % 20]] = 50.0 + (k * 37 % 29) as f64;
+        let mut lot = 1_u64;
+        for _ in 0..60 {
+            lot = lot.wrapping_mul(6_364_136_223_846_793_005).wrapping_add(1_442_695_040_888_963_407);
+            f.u[[(lot >> 40) as usize % 20, (lot >> 20) as usize % 20]] = 50.0 + (lot >> 50) as f64;
         }
         let options = ScreenOptions { max_share: 0.05, ..ScreenOptions::default() };
         let found = screen_by_median(&f, &options);
