@@ -111,7 +111,7 @@ pub struct ScaleResult {
     pub noise_rms: f64,
     /// Mean squared outflow over its variance (noise and truncation); 1 expected.
     pub statistic: f64,
-    /// Degrees of freedom of the statistic.
+    /// Degrees of freedom of the statistic, from the correlations of the boxes; `p` also grants 1 % of doubt about sigma.
     pub degrees: f64,
     /// Probability of a larger statistic without divergence, for the declared sigma (for the estimated one when none is declared:
     /// NaN at size 1, which that estimate comes from).
@@ -175,6 +175,9 @@ pub struct DivergenceReport {
 
 /// Fewest degrees of freedom of the smallest boxes for a verdict.
 const MIN_DEGREES: f64 = 8.0;
+/// Relative uncertainty of sigma and of the noise model that is always granted: on millions of cells the outflow would otherwise
+/// judge the fourth digit of sigma.
+const MODEL_DOUBT: f64 = 0.01;
 /// Overlap that stands for "any" when the overlap is unknown.
 const LARGE_OVERLAP: f64 = 0.9;
 /// Step of the search for the overlap.
@@ -324,9 +327,13 @@ impl BoxTest {
             if *m == 1 {
                 base = nu;
             }
-            let p_free =
-                if *m == 1 { f64::NAN } else { FisherSnedecor::new(nu, base).map_or(f64::NAN, |f| f.sf(free)) };
-            let p = if declared { ChiSquared::new(nu).map_or(f64::NAN, |c| c.sf(nu * t)) } else { p_free };
+            let judged = believed(nu);
+            let p_free = if *m == 1 {
+                f64::NAN
+            } else {
+                FisherSnedecor::new(judged, believed(base)).map_or(f64::NAN, |f| f.sf(free))
+            };
+            let p = if declared { ChiSquared::new(judged).map_or(f64::NAN, |c| c.sf(judged * t)) } else { p_free };
             growth.push(p_free);
             let noise = sums.variance * used * used;
             scales.push(ScaleResult {
@@ -372,6 +379,11 @@ impl BoxTest {
         }
         (Verdict::Inconsistent, Reason::GrowsWithBox)
     }
+}
+
+/// Degrees of freedom with the doubt about the noise model in them: `Var T = 2 / nu + (2 doubt)^2`.
+fn believed(nu: f64) -> f64 {
+    2.0 / (2.0 / nu + (2.0 * MODEL_DOUBT).powi(2))
 }
 
 /// Means over the boxes of one size.

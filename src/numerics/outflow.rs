@@ -1,6 +1,6 @@
 //! Outflow of cells and of tiles of cells from the edge fluxes, with its noise and the allowance for its truncation error.
 
-use ndarray::{Array2, ArrayView2, Zip};
+use ndarray::{Array2, Zip};
 use rayon::prelude::*;
 
 use super::flux::{EdgeRules, edge_fluxes_of};
@@ -100,7 +100,7 @@ fn integral_weights(nodes: &[f64], b: f64) -> Vec<f64> {
         .collect()
 }
 
-/// Edges of one component: along y for u, along x for v.  Arrays are indexed `[[k, c]]`: `k` along the edges, `c` across.
+/// Edges of one component: along y for u, along x for v.  Arrays are as the grid has them; `k` counts along the edges, `c` across.
 struct Edges {
     values: Array2<f64>,
     flux: Array2<f64>,
@@ -128,14 +128,18 @@ impl Edges {
         let corrections = Corrections::new(axis, &rules);
         let mut pattern = Array2::zeros(flux.dim());
         let mut correction = Array2::from_elem(flux.dim(), f64::NAN);
-        Zip::indexed(pattern.rows_mut()).and(correction.rows_mut()).par_for_each(|k, mut pattern, mut correction| {
-            for c in 0..pattern.len() {
-                let usable = |m: Option<usize>| m.is_some_and(|m| m < values.nrows() && values[[m, c]].is_finite());
+        let turn = |a: usize, b: usize| if across_first { (b, a) } else { (a, b) };
+        let count = if across_first { values.ncols() } else { values.nrows() };
+        Zip::indexed(pattern.rows_mut()).and(correction.rows_mut()).par_for_each(|row, mut pattern, mut correction| {
+            for column in 0..pattern.len() {
+                let (k, c) = turn(row, column);
+                let value = |m: usize| values[turn(m, c)];
+                let usable = |m: Option<usize>| m.is_some_and(|m| m < count && value(m).is_finite());
                 let around = [k.checked_sub(2), k.checked_sub(1), Some(k + 2), Some(k + 3)].map(usable);
                 let found = Corrections::pattern(around[0], around[1], around[2], around[3]);
-                pattern[c] = found as u8;
+                pattern[column] = found as u8;
                 if let Some(weights) = &corrections.table[k][found] {
-                    correction[c] = correction_terms(k, weights).map(|(n, w)| w * values[[n, c]]).sum();
+                    correction[column] = correction_terms(k, weights).map(|(n, w)| w * value(n)).sum();
                 }
             }
         });
@@ -143,17 +147,23 @@ impl Edges {
         Self { values, flux, correction, jump, pattern, rules, corrections, axis: axis.clone(), sigma, across_first }
     }
 
+    /// Array index of edge or node `k` of line `c`.
+    fn place(&self, k: usize, c: usize) -> (usize, usize) {
+        if self.across_first { (c, k) } else { (k, c) }
+    }
+
     fn sigma_at(&self, k: usize, c: usize) -> f64 {
-        if self.across_first { self.sigma.at(c, k) } else { self.sigma.at(k, c) }
+        let (j, i) = self.place(k, c);
+        self.sigma.at(j, i)
     }
 
     /// Allowance for a step the grid does not resolve: half the step times its length, faded out by the square of the ratio of
     /// third to first difference where the flow is resolved; 0 where the third difference is within `scale` times the noise.
     fn jump_at(&self, k: usize, c: usize, scale: f64) -> f64 {
-        let f = |m: usize| self.values[[m, c]];
+        let f = |m: usize| self.values[self.place(m, c)];
         let mut third: f64 = 0.0;
         for start in k.saturating_sub(2)..=k {
-            if start + 3 < self.values.nrows() {
+            if start + 3 < self.axis.len() {
                 let d = (f(start + 3) - 3.0 * f(start + 2) + 3.0 * f(start + 1) - f(start)).abs();
                 third = third.max(if d.is_finite() { d } else { 0.0 });
             }
@@ -169,19 +179,33 @@ impl Edges {
 
     fn allow_jumps(&mut self, scale: f64) {
         let mut jump = Array2::zeros(self.flux.dim());
-        Zip::indexed(jump.rows_mut()).par_for_each(|k, mut row| {
-            for c in 0..row.len() {
-                if self.flux[[k, c]].is_finite() {
-                    row[c] = self.jump_at(k, c, scale);
+        Zip::indexed(jump.rows_mut()).par_for_each(|row, mut jumps| {
+            for column in 0..jumps.len() {
+                if self.flux[[row, column]].is_finite() {
+                    let (k, c) = self.place(row, column);
+                    jumps[column] = self.jump_at(k, c, scale);
                 }
             }
         });
         self.jump = jump;
     }
 
+    /// Noise variance of the correction by pattern, for equal spacing and sigma; NaN for patterns that do not occur.
+    fn noise_by_pattern(&self, rho: &Correlation) -> [f64; 16] {
+        let mut table = [f64::NAN; 16];
+        for ((row, column), &pattern) in self.pattern.indexed_iter() {
+            let slot = &mut table[usize::from(pattern)];
+            if slot.is_nan() && self.flux[[row, column]].is_finite() {
+                let (k, c) = self.place(row, column);
+                *slot = self.correction_noise(k, c, rho);
+            }
+        }
+        table
+    }
+
     /// Noise variance of the correction of an edge.
     fn correction_noise(&self, k: usize, c: usize, rho: &Correlation) -> f64 {
-        let Some(weights) = &self.corrections.table[k][self.pattern[[k, c]] as usize] else {
+        let Some(weights) = &self.corrections.table[k][usize::from(self.pattern[self.place(k, c)])] else {
             return 0.0;
         };
         let mut sum = 0.0;
@@ -259,9 +283,11 @@ impl Outflows {
         let (rules_x, rules_y) = (EdgeRules::new(&grid.x), EdgeRules::new(&grid.y));
         let fluxes = edge_fluxes_of(&u, &v, &rules_x, &rules_y);
         let u = Edges::new(u, fluxes.along_y, &grid.y, rules_y, NodeSigma::of(field, Component::U), false);
-        let (v, flux) = (turned(v.view()), turned(fluxes.along_x.view()).mapv_into(|q| -q));
+        let flux = fluxes.along_x.mapv_into(|q| -q);
         let v = Edges::new(v, flux, &grid.x, rules_x, NodeSigma::of(field, Component::V), true);
-        let ok = |e: &Edges, k: usize, c: usize| e.flux[[k, c]].is_finite() && e.correction[[k, c]].is_finite();
+        let ok = |e: &Edges, k: usize, c: usize| {
+            e.flux[e.place(k, c)].is_finite() && e.correction[e.place(k, c)].is_finite()
+        };
         let (ny, nx) = grid.shape();
         let usable = Array2::from_shape_fn((ny - 1, nx - 1), |(j, i)| {
             ok(&u, j, i) && ok(&u, j, i + 1) && ok(&v, i, j) && ok(&v, i, j + 1)
@@ -328,7 +354,7 @@ impl Outflows {
         buffer.clear();
         buffer.resize(along * across, 0.0);
         self.outline(edges, m, place, |k, c, sign| {
-            let pattern = edges.pattern[[k, c]];
+            let pattern = edges.pattern[edges.place(k, c)];
             for (node, w) in edges.rules.of(k, pattern & 8 != 0, pattern & 4 != 0).terms() {
                 buffer[(node + PAD - k0) * across + c - c0] += sign * w;
             }
@@ -368,20 +394,17 @@ impl Outflows {
         if part == 0 { self.u.sigma.at(term.j, term.i) } else { self.v.sigma.at(term.j, term.i) }
     }
 
-    /// Whether the noise of a tile is that of any other complete tile of its size: equal spacing and sigma, every cell usable,
-    /// every rule the regular one.
+    /// Whether a tile is complete and all its rules are the regular ones: on an even grid all such tiles have the same noise.
     fn is_regular(&self, m: usize, place: (usize, usize)) -> bool {
-        let even = |e: &Edges| e.axis.is_uniform() && e.sigma.uniform().is_some();
-        if !(even(&self.u) && even(&self.v)) {
-            return false;
-        }
         let (j0, i0) = self.corner(m, place);
         if !(j0..j0 + m).all(|j| (i0..i0 + m).all(|i| self.usable[[j, i]])) {
             return false;
         }
         let mut regular = true;
         for edges in [&self.u, &self.v] {
-            self.outline(edges, m, place, |k, c, _| regular &= usize::from(edges.pattern[[k, c]]) == Corrections::FULL);
+            self.outline(edges, m, place, |k, c, _| {
+                regular &= usize::from(edges.pattern[edges.place(k, c)]) == Corrections::FULL
+            });
         }
         regular
     }
@@ -392,35 +415,46 @@ impl Outflows {
             let terms = self.tile_terms_in(m, place, buffer);
             self.tile_covariance(&terms, &terms, rho)
         };
-        let regular: Vec<bool> = places.par_iter().map(|&place| self.is_regular(m, place)).collect();
+        let even = self.is_even();
+        // On even grids the noise of an edge rule depends on its pattern alone, that of a single cell on the four rules around it.
+        let noise_tables = even.then(|| [self.u.noise_by_pattern(rho), self.v.noise_by_pattern(rho)]);
+        let cells = (even && m == 1).then(|| self.cell_variances(places, rho));
+        let regular: Vec<bool> = if cells.is_some() {
+            Vec::new()
+        } else {
+            places.par_iter().map(|&place| even && self.is_regular(m, place)).collect()
+        };
         let shared = regular.iter().position(|r| *r).map_or(f64::NAN, |k| exact(places[k], &mut Vec::new()));
-        let regular_noise: [f64; 2] = [&self.u, &self.v].map(|e| {
-            let full = |(_, p): &((usize, usize), &u8)| usize::from(**p) == Corrections::FULL;
-            let any = e.pattern.indexed_iter().find(full);
-            any.map_or(f64::NAN, |((k, c), _)| e.correction_noise(k, c, rho))
-        });
         places
             .par_iter()
-            .zip(&regular)
-            .map_init(Vec::new, |buffer, (&place, &is_regular)| {
+            .enumerate()
+            .map_init(Vec::new, |buffer, (index, &place)| {
                 let (mut outflow, mut signed, mut squares, mut noise, mut jumps) = (0.0, 0.0, 0.0, 0.0, 0.0);
-                for (edges, regular_noise) in [&self.u, &self.v].into_iter().zip(regular_noise) {
+                for (part, edges) in [&self.u, &self.v].into_iter().enumerate() {
                     let with_jumps = !edges.jump.is_empty();
                     self.outline(edges, m, place, |k, c, sign| {
-                        let correction = edges.correction[[k, c]];
-                        outflow += sign * edges.flux[[k, c]];
+                        let correction = edges.correction[edges.place(k, c)];
+                        outflow += sign * edges.flux[edges.place(k, c)];
                         signed += sign * correction;
                         squares += correction * correction;
-                        noise += if is_regular { regular_noise } else { edges.correction_noise(k, c, rho) };
+                        noise += match &noise_tables {
+                            Some(tables) => tables[part][usize::from(edges.pattern[edges.place(k, c)])],
+                            None => edges.correction_noise(k, c, rho),
+                        };
                         if with_jumps {
-                            jumps += edges.jump[[k, c]].powi(2);
+                            jumps += edges.jump[edges.place(k, c)].powi(2);
                         }
                     });
                 }
+                let variance = match &cells {
+                    Some(table) => table[self.cell_key(place)],
+                    None if regular[index] => shared,
+                    None => exact(place, buffer),
+                };
                 Tile {
                     place,
                     outflow,
-                    variance: if is_regular { shared } else { exact(place, buffer) },
+                    variance,
                     allowance: TRUNCATION_FACTOR * (signed * signed + squares),
                     // Noise of the signed sum and of the sum of squares is the same for independent edges.
                     allowance_noise: 2.0 * TRUNCATION_FACTOR * noise,
@@ -429,9 +463,28 @@ impl Outflows {
             })
             .collect()
     }
-}
 
-/// Copy with the axes exchanged, in standard layout.
-fn turned(a: ArrayView2<'_, f64>) -> Array2<f64> {
-    a.t().as_standard_layout().into_owned()
+    /// Whether spacing and sigma are the same everywhere.
+    fn is_even(&self) -> bool {
+        [&self.u, &self.v].iter().all(|e| e.axis.is_uniform() && e.sigma.uniform().is_some())
+    }
+
+    /// Which of the four rules each of the edges around a cell has, as one number below 256.
+    fn cell_key(&self, (j, i): (usize, usize)) -> usize {
+        let rule = |e: &Edges, k: usize, c: usize| usize::from(e.pattern[e.place(k, c)] >> 2);
+        rule(&self.u, j, i) + 4 * rule(&self.u, j, i + 1) + 16 * rule(&self.v, i, j) + 64 * rule(&self.v, i, j + 1)
+    }
+
+    /// Noise variances of single cells by [`Self::cell_key`], for the keys that occur.
+    fn cell_variances(&self, places: &[(usize, usize)], rho: &Correlation) -> Vec<f64> {
+        let mut table = vec![f64::NAN; 256];
+        for &place in places {
+            let key = self.cell_key(place);
+            if table[key].is_nan() {
+                let terms = self.tile_terms(1, place);
+                table[key] = self.tile_covariance(&terms, &terms, rho);
+            }
+        }
+        table
+    }
 }

@@ -98,11 +98,17 @@ const GUARD: f64 = 0.3;
 /// be almost constant where the other turns within a node.
 const CROSS_SHARE: f64 = 0.25;
 
+/// Nodes on either side that the guard looks at.
+const GUARD_REACH: usize = 3;
+
 /// How much closer a one-sided prediction must come where both sides are known.
 const ONE_SIDED_PENALTY: f64 = 10.0;
 
 /// Ratio of the scatter about a median of eight to sigma, white noise: sqrt(1 + 1.5 / 8), the variance of the median included.
 const MEDIAN_SCATTER: f64 = 1.09;
+
+/// About this many nodes give the scatter.
+const SCATTER_SAMPLE: usize = 20_000;
 
 /// Median absolute deviation to standard deviation of a normal sample.
 const MAD: f64 = 1.482_602_218_505_602;
@@ -136,6 +142,19 @@ fn median(values: &mut [f64]) -> f64 {
     if n == 0 {
         return f64::NAN;
     }
+    if n <= 9 {
+        // Insertion sort: most calls have the eight neighbors of a node.
+        for a in 1..n {
+            let value = values[a];
+            let mut b = a;
+            while b > 0 && values[b - 1] > value {
+                values[b] = values[b - 1];
+                b -= 1;
+            }
+            values[b] = value;
+        }
+        return if n % 2 == 1 { values[n / 2] } else { 0.5 * (values[n / 2 - 1] + values[n / 2]) };
+    }
     let (below, &mut upper, _) = values.select_nth_unstable_by(n / 2, f64::total_cmp);
     if n % 2 == 1 { upper } else { 0.5 * (upper + below.iter().copied().fold(f64::NEG_INFINITY, f64::max)) }
 }
@@ -165,40 +184,73 @@ pub fn screen_by_median(field: &VelocityField, options: &ScreenOptions) -> Scree
         ScreenOptions::EPSILON_FACTOR * sigma.map_or(estimated, |sigma| sigma.max(LEAST_SCATTER * estimated))
     });
     let least = ScreenOptions::EPSILON_FACTOR * LEAST_SCATTER * estimated;
+    let mut open: Option<Vec<(usize, usize)>> = None;
     for _ in 0..options.passes {
         found.passes += 1;
-        let judged: Vec<Vec<(f64, bool)>> = (0..shape.0)
-            .into_par_iter()
-            .map(|j| {
-                (0..shape.1).map(|i| judge_by_median(field, &valid, j, i, (found.scale, least), options)).collect()
-            })
-            .collect();
+        let judge = |(j, i): (usize, usize)| judge_by_median(field, &valid, j, i, (found.scale, least), options);
+        let judged: Vec<(usize, usize, f64, bool)> = match &open {
+            None => (0..shape.0)
+                .into_par_iter()
+                .flat_map_iter(|j| (0..shape.1).map(move |i| (j, i)))
+                .map(|(j, i)| (j, i, judge((j, i))))
+                .map(|(j, i, (ratio, reject))| (j, i, ratio, reject))
+                .collect(),
+            Some(nodes) => {
+                nodes.iter().map(|&(j, i)| (j, i, judge((j, i)))).map(|(j, i, (r, x))| (j, i, r, x)).collect()
+            }
+        };
         let mut candidates = Vec::new();
-        for (j, row) in judged.iter().enumerate() {
-            for (i, &(ratio, reject)) in row.iter().enumerate() {
-                if ratio.is_finite() {
-                    found.ratio[[j, i]] = ratio;
-                }
-                if reject {
-                    candidates.push((ratio, j, i));
-                }
+        for (j, i, ratio, reject) in judged {
+            if ratio.is_finite() {
+                found.ratio[[j, i]] = ratio;
+            }
+            if reject {
+                candidates.push((ratio, j, i));
             }
         }
+        let before = found.rejected.clone();
         if !take_worst(&mut found, &mut valid, candidates, allowed) {
             break;
         }
+        // Only what has a newly rejected vector within the reach of the guard can change.
+        let mut touched = Array2::from_elem(shape, false);
+        for ((j, i), &now) in found.rejected.indexed_iter() {
+            if now && !before[[j, i]] {
+                for jj in j.saturating_sub(GUARD_REACH)..=(j + GUARD_REACH).min(shape.0 - 1) {
+                    for ii in i.saturating_sub(GUARD_REACH)..=(i + GUARD_REACH).min(shape.1 - 1) {
+                        touched[[jj, ii]] = true;
+                    }
+                }
+            }
+        }
+        open = Some(touched.indexed_iter().filter(|(_, t)| **t).map(|(node, _)| node).collect());
     }
     reject_stranded(field, &mut found, &mut valid, allowed);
     found
 }
 
+/// Largest number that divides both.
+fn greatest_divisor(mut a: usize, mut b: usize) -> usize {
+    while b > 0 {
+        (a, b) = (b, a % b);
+    }
+    a
+}
+
 /// Estimate of sigma from the scatter of the vectors about their local medians.
 fn median_scatter(field: &VelocityField) -> f64 {
+    let nx = field.grid().nx();
+    // A stride that shares no factor with the rows visits every column.
+    let mut step = (field.grid().node_count() / SCATTER_SAMPLE).max(1);
+    while step > 1 && greatest_divisor(step, nx) > 1 {
+        step += 1;
+    }
+    let chosen = (0..field.grid().node_count()).step_by(step).map(|k| (k / nx, k % nx));
     let sigma = [&field.u, &field.v].map(|f| {
         let mut deviations: Vec<f64> = Vec::new();
         let mut values = Vec::with_capacity(8);
-        for ((j, i), &ok) in field.valid.indexed_iter() {
-            if !ok {
+        for (j, i) in chosen.clone() {
+            if !field.valid[[j, i]] {
                 continue;
             }
             values.clear();
@@ -225,17 +277,21 @@ fn judge_by_median(
     if !valid[[j, i]] {
         return (f64::NAN, false);
     }
-    let nodes: Vec<(usize, usize)> = around(valid, j, i).collect();
-    if nodes.len() < options.min_neighbors {
+    let (mut us, mut vs, mut n) = ([0.0; 8], [0.0; 8], 0);
+    for node in around(valid, j, i) {
+        us[n] = field.u[node];
+        vs[n] = field.v[node];
+        n += 1;
+    }
+    if n < options.min_neighbors.max(1) {
         return (f64::NAN, false);
     }
     let declared = field.sigma.at(j, i).filter(|_| options.epsilon.is_none());
     let epsilons = declared.map_or((common, common), |(su, sv)| {
         ((ScreenOptions::EPSILON_FACTOR * su).max(least), (ScreenOptions::EPSILON_FACTOR * sv).max(least))
     });
-    let parts = [(&field.u, epsilons.0), (&field.v, epsilons.1)].map(|(f, epsilon)| {
-        let mut values: Vec<f64> = nodes.iter().map(|&node| f[node]).collect();
-        let (middle, scatter) = median_and_scatter(&mut values);
+    let parts = [(&field.u, &mut us, epsilons.0), (&field.v, &mut vs, epsilons.1)].map(|(f, values, epsilon)| {
+        let (middle, scatter) = median_and_scatter(&mut values[..n]);
         (f, (f[[j, i]] - middle).abs(), scatter, epsilon)
     });
     let (mut worst, mut reject) = (0.0_f64, false);
@@ -395,24 +451,16 @@ pub fn screen_by_fit(
     let limit = (2.0 * (judged as f64 / options.expected_false).max(std::f64::consts::E).ln()).sqrt();
     let floor = ROUNDING * field.rms_speed();
     let undeclared = field.sigma.at(0, 0).is_none();
+    let local_scale = LocalScale::new(&ru, &rv, everywhere);
     let rows: Vec<Vec<[f64; 2]>> = (0..ny)
         .into_par_iter()
         .map(|j| {
-            let mut near = Vec::with_capacity(2 * (2 * WINDOW + 1).pow(2));
             (0..nx)
                 .map(|i| {
                     if !(ru[[j, i]].is_finite() && rv[[j, i]].is_finite()) {
                         return [f64::NAN; 2];
                     }
-                    near.clear();
-                    for jj in j.saturating_sub(WINDOW)..=(j + WINDOW).min(ny - 1) {
-                        for ii in i.saturating_sub(WINDOW)..=(i + WINDOW).min(nx - 1) {
-                            if ru[[jj, ii]].is_finite() && (jj, ii) != (j, i) {
-                                near.extend([ru[[jj, ii]].abs(), rv[[jj, ii]].abs()]);
-                            }
-                        }
-                    }
-                    let local = if near.len() < 16 { everywhere } else { MAD * median(&mut near) };
+                    let local = local_scale.at(j, i);
                     let end = |a: Option<(usize, usize)>| a.is_none_or(|node| !field.valid[node]);
                     let y_end = end(j.checked_sub(1).map(|a| (a, i))) || end((j + 1 < ny).then_some((j + 1, i)));
                     let x_end = end(i.checked_sub(1).map(|a| (j, a))) || end((i + 1 < nx).then_some((j, i + 1)));
@@ -422,18 +470,21 @@ pub fn screen_by_fit(
                         _ => RESIDUAL_NOISE_RIM,
                     };
                     let data_scale = if undeclared { local.max(everywhere) } else { local };
-                    let spread = local_spread(field, j, i);
                     let sigma = field.sigma.at(j, i).unwrap_or((0.0, 0.0));
-                    let mut square = 0.0;
-                    let mut size: f64 = 0.0;
-                    for (r, sigma, own_end) in [(ru[[j, i]], sigma.0, y_end), (rv[[j, i]], sigma.1, x_end)] {
-                        let kept = 1.0 - if own_end { LEVERAGE_RIM } else { LEVERAGE };
-                        let noise = shape_factor * sigma.max(data_scale / RESIDUAL_NOISE);
-                        let sd = noise.max(kept * SPREAD_SHARE * spread).max(floor);
-                        square += (r / sd).powi(2);
-                        size = size.max(r.abs() / kept);
-                    }
-                    [square.sqrt() / limit, size]
+                    let judge = |spread: f64| {
+                        let (mut square, mut size) = (0.0, 0.0_f64);
+                        for (r, sigma, own_end) in [(ru[[j, i]], sigma.0, y_end), (rv[[j, i]], sigma.1, x_end)] {
+                            let kept = 1.0 - if own_end { LEVERAGE_RIM } else { LEVERAGE };
+                            let noise = shape_factor * sigma.max(data_scale / RESIDUAL_NOISE);
+                            let sd = noise.max(kept * SPREAD_SHARE * spread).max(floor);
+                            square += (r / sd).powi(2);
+                            size = size.max(r.abs() / kept);
+                        }
+                        [square.sqrt() / limit, size]
+                    };
+                    // The spread only matters for a vector that is suspicious without it.
+                    let found = judge(0.0);
+                    if found[0] > 1.0 { judge(local_spread(field, j, i)) } else { found }
                 })
                 .collect()
         })
@@ -467,6 +518,47 @@ pub fn screen_by_fit(
     let mut valid = field.valid.clone();
     take_worst(&mut found, &mut valid, candidates, allowed);
     found
+}
+
+/// Median absolute residual (times [`MAD`]) of windows around every fourth node; a node takes the nearest.
+struct LocalScale {
+    scales: Array2<f64>,
+}
+
+impl LocalScale {
+    /// Nodes between window centers.
+    const STEP: usize = 4;
+    /// Fewest residuals (of u and v together) for a scale of its own.
+    const LEAST: usize = 16;
+
+    fn new(ru: &Array2<f64>, rv: &Array2<f64>, everywhere: f64) -> Self {
+        let (ny, nx) = ru.dim();
+        let (rows, columns) = (ny.div_ceil(Self::STEP), nx.div_ceil(Self::STEP));
+        let mut scales = Array2::from_elem((rows, columns), everywhere);
+        Zip::indexed(scales.rows_mut()).par_for_each(|a, mut row| {
+            let mut near = Vec::with_capacity(2 * (2 * WINDOW + 1).pow(2));
+            let j = (a * Self::STEP + Self::STEP / 2).min(ny - 1);
+            for (b, scale) in row.iter_mut().enumerate() {
+                let i = (b * Self::STEP + Self::STEP / 2).min(nx - 1);
+                near.clear();
+                for jj in j.saturating_sub(WINDOW)..=(j + WINDOW).min(ny - 1) {
+                    for ii in i.saturating_sub(WINDOW)..=(i + WINDOW).min(nx - 1) {
+                        if ru[[jj, ii]].is_finite() && rv[[jj, ii]].is_finite() {
+                            near.extend([ru[[jj, ii]].abs(), rv[[jj, ii]].abs()]);
+                        }
+                    }
+                }
+                if near.len() >= Self::LEAST {
+                    *scale = MAD * median(&mut near);
+                }
+            }
+        });
+        Self { scales }
+    }
+
+    fn at(&self, j: usize, i: usize) -> f64 {
+        self.scales[[j / Self::STEP, i / Self::STEP]]
+    }
 }
 
 /// Median distance of the vectors in 5 x 5 nodes from their median, the larger of the two components.

@@ -97,28 +97,31 @@ fn noise_on_incompressible_flow_is_rarely_called_divergent() {
 }
 
 #[test]
-#[ignore = "slow"] // 200 fields for each of 36 cases: standard error 1.5 % in each, 0.3 % of the mean
+#[ignore = "slow"] // 36 cases each: of 200 fields, standard error 1.5 % in a case; of 60 fields where less is declared, 3 %
 fn false_alarms_stay_near_the_nominal_5_percent() {
-    for n in [65, 17] {
-        for said in [Said::Both, Said::Overlap, Said::Nothing] {
-            let (mut sum, mut cases) = (0.0, 0.0);
-            for overlap in [0.0, 0.5, 0.75] {
-                for (name, flow) in named_flows() {
-                    let clean = sample(n, |x, y| (flow(x, y).1, flow(x, y).2));
-                    for level in [0.005, 0.02, 0.05] {
-                        let [inconsistent, undecided, rejected] = shares(&clean, level, overlap, 200, said);
-                        println!(
-                            "{n} {said:?} {overlap} {name} {level}: inconsistent {inconsistent:.3} undecided {undecided:.3} p<.05 {rejected:.3}"
-                        );
-                        sum += rejected;
-                        cases += 1.0;
-                        assert!(inconsistent <= 0.10, "{n} {said:?} {name} {overlap} {level}: {inconsistent}");
-                    }
+    for (n, said, fields, most) in [
+        (65, Said::Both, 200, 0.09),
+        (65, Said::Overlap, 60, 0.15),
+        (65, Said::Nothing, 60, 0.15),
+        (17, Said::Both, 200, 0.09),
+    ] {
+        let (mut sum, mut cases) = (0.0, 0.0);
+        for overlap in [0.0, 0.5, 0.75] {
+            for (name, flow) in named_flows() {
+                let clean = sample(n, |x, y| (flow(x, y).1, flow(x, y).2));
+                for level in [0.005, 0.02, 0.05] {
+                    let [inconsistent, undecided, rejected] = shares(&clean, level, overlap, fields, said);
+                    println!(
+                        "{n} {said:?} {overlap} {name} {level}: inconsistent {inconsistent:.3} undecided {undecided:.3} p<.05 {rejected:.3}"
+                    );
+                    sum += rejected;
+                    cases += 1.0;
+                    assert!(rejected <= most, "{n} {said:?} {name} {overlap} {level}: {rejected}");
                 }
             }
-            println!("{n} {said:?} mean {:.4}", sum / cases);
-            assert!(n < 65 || (0.02..0.08).contains(&(sum / cases)));
         }
+        println!("{n} {said:?} mean {:.4}", sum / cases);
+        assert!(n < 65 || (0.015..0.08).contains(&(sum / cases)));
     }
 }
 
@@ -155,7 +158,7 @@ fn divergence_of_known_size_is_seen_as_often_as_the_reference_sees_it() {
         ];
         for (case, clean) in cases {
             for said in [Said::Both, Said::Overlap, Said::Nothing] {
-                let found = [0.0, 0.5, 0.75].map(|overlap| shares(&clean, 0.02, overlap, 60, said));
+                let found = [0.0, 0.5, 0.75].map(|overlap| shares(&clean, 0.02, overlap, 40, said));
                 println!(
                     "{name} {case} {said:?}: inconsistent {:?} undecided {:?} p<.05 {:?}",
                     found.map(|f| f[0]),
