@@ -370,7 +370,7 @@ impl BoxTest {
         }
         let sigma_explains = self.declared
             && first.p * (self.scales.len() as f64) < options.significance
-            && !(self.p_growth < options.significance);
+            && (self.p_growth.is_nan() || self.p_growth >= options.significance);
         if sigma_explains {
             return (Verdict::Undecided, Reason::SigmaTooSmall);
         }

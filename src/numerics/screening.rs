@@ -494,7 +494,7 @@ pub fn screen_by_fit(
         for i in 0..nx {
             let [ratio, size] = rows[j][i];
             found.ratio[[j, i]] = ratio;
-            if !(ratio > 1.0) {
+            if ratio.is_nan() || ratio <= 1.0 {
                 continue;
             }
             let worst = (j.saturating_sub(PEEL)..=(j + PEEL).min(ny - 1))

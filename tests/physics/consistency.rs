@@ -1,5 +1,7 @@
 //! The incompressibility check on known flows: false alarms, power, exact fields.
 
+#![allow(clippy::print_stdout)] // the slow tests print the tables they measure
+
 use std::path::PathBuf;
 use std::sync::Arc;
 
@@ -165,6 +167,9 @@ fn divergence_of_known_size_is_seen_as_often_as_the_reference_sees_it() {
                     found.map(|f| f[1]),
                     found.map(|f| f[2])
                 );
+                if name == "Taylor-Green" && case == "u +3 %" && matches!(said, Said::Both) {
+                    assert!(found.iter().all(|f| f[0] > 0.8));
+                }
                 if case == "v flipped" {
                     assert!(found.iter().all(|f| f[0] > 0.99));
                 }

@@ -1,5 +1,7 @@
 //! Screening on known flows: good vectors stay, planted errors go.
 
+#![allow(clippy::print_stdout)] // the slow tests print the tables they measure
+
 use isopsi::field::{Sigma, VelocityField};
 use isopsi::numerics::fill::fill_gaps;
 use isopsi::numerics::noise::NoiseGenerator;
