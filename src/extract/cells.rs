@@ -89,8 +89,8 @@ const SADDLE_REACH: f64 = 3.0;
 
 /// Finds for every center the largest region of closed streamlines around it that holds no other stagnation point.
 ///
-/// The region ends at the level of a saddle (`bound_id`), of a wall or body (`wall_points` when a separation and an attachment lie on
-/// it, note `bounded_by_wall`), or where the data end (note `open_at_edge`: area and flux are lower bounds).  Area unit length^2,
+/// The region ends at the level of a saddle (`bound_id`), of a wall or body (`wall_points` when a separation and an attachment on
+/// one side or body lie on it, note `bounded_by_wall`), or where the data end (note `open_at_edge`: area and flux are lower bounds).  Area unit length^2,
 /// flux in the unit of psi.  Area of a bounded cell is that of the bounding line: the loop at 99.8 % of the way plus a linear step.
 pub fn find_cells(
     scene: &Scene<'_>,
@@ -207,7 +207,9 @@ fn find_cell(
             };
             let (separation, attachment) = (on_loop(StagnationKind::Separation), on_loop(StagnationKind::Attachment));
             cell.bound_id = separation.or(attachment).map(|p| p.id);
-            if let (Some(s), Some(a)) = (separation, attachment) {
+            if let (Some(s), Some(a)) = (separation, attachment)
+                && s.boundary == a.boundary
+            {
                 cell.wall_points = Some((s.id, a.id));
                 cell.wall_length = Some(length_along(scene, s, a));
             }
