@@ -111,6 +111,19 @@ pub struct FittedFlow {
 }
 
 impl FittedFlow {
+    /// The fitted field with the vectors of the fit at filled nodes.
+    pub fn filled(&self) -> VelocityField {
+        let mut field = self.used.clone();
+        for (node, flag) in self.flags.indexed_iter() {
+            if flag.has(Flags::FILLED) {
+                field.u[node] = self.u_fit[node];
+                field.v[node] = self.v_fit[node];
+                field.valid[node] = field.u[node].is_finite() && field.v[node].is_finite();
+            }
+        }
+        field
+    }
+
     /// psi at the nodes, narrow gaps filled; NaN where there is none.
     pub fn surface_psi(&self) -> &Array2<f64> {
         self.surface.psi()

@@ -47,7 +47,8 @@ pub fn flux(job: &Job<'_>, from: [f64; 2], to: [f64; 2]) -> Result<(), Failure> 
     job.say(&flow);
     let scene = Scene { surface: &flow.extended, domain: &flow.used.domain, flags: &flow.flags };
     let sign = job.context.psi_sign;
-    let flux = flux_between(&scene, &flow.used, &flow.fit.component, from, to, &flow.fit.body_psi, &flow.fit.wall_psi)?;
+    let flux =
+        flux_between(&scene, &flow.filled(), &flow.fit.component, from, to, &flow.fit.body_psi, &flow.fit.wall_psi)?;
     let plane = flow.used.domain.thickness == Thickness::Uniform;
     let unit = job.context.units.psi(plane);
     let length = job.context.units.position();
@@ -60,6 +61,7 @@ pub fn flux(job: &Job<'_>, from: [f64; 2], to: [f64; 2]) -> Result<(), Failure> 
                 "psi_from": sign * flux.psi_from, "psi_to": sign * flux.psi_to,
                 "flux": flux.by_psi, "flux_along_line": line,
                 "why_not_along_line": flux.by_line.as_ref().err().map(ToString::to_string),
+                "through_filled": flux.through_filled,
                 "flux_around_axis": flux.around_axis,
             })
         ))?;
@@ -83,6 +85,9 @@ pub fn flux(job: &Job<'_>, from: [f64; 2], to: [f64; 2]) -> Result<(), Failure> 
             )
         }
         Err(reason) => text += &format!("  along the straight line: not formed, {reason}\n"),
+    }
+    if flux.through_filled {
+        text += "  the line passes filled nodes: there the vectors come from the fit\n";
     }
     if let Some(whole) = flux.around_axis {
         text += &format!("  around the axis, 2 pi times: {whole:.6} {unit}\n");

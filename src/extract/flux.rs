@@ -1,6 +1,6 @@
 //! Volume flux between two points, from psi and along the straight line.
 
-use super::contour::Scene;
+use super::contour::{Scene, VertexFlag};
 use super::trace::distance;
 use crate::field::{Shape, Side, Thickness, VelocityField};
 use crate::numerics::surface::PsiSurface;
@@ -21,6 +21,8 @@ pub struct Flux {
     pub by_psi: f64,
     /// Integral of the measured vectors along the straight line, `None` with the reason when it cannot be formed.
     pub by_line: Result<f64, LineGap>,
+    /// Whether that line passes filled nodes, whose vectors come from the fit.
+    pub through_filled: bool,
     /// Whole flux of an axisymmetric flow, `2 pi` times the difference.
     pub around_axis: Option<f64>,
 }
@@ -100,6 +102,10 @@ pub fn flux_between(
         psi_to,
         by_psi,
         by_line: line_integral(scene, field, from, to),
+        through_filled: (0..=200).any(|k| {
+            let t = f64::from(k) / 200.0;
+            scene.flag([from[0] + t * (to[0] - from[0]), from[1] + t * (to[1] - from[1])]) == VertexFlag::Filled
+        }),
         around_axis: axisymmetric.then_some(std::f64::consts::TAU * by_psi),
     })
 }

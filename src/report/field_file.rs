@@ -1,11 +1,11 @@
 //! The field file of a run, the stream-function file, the cleaned field.
 
-use ndarray::{Array2, Zip};
+use ndarray::Array2;
 
 use super::ReportContext;
 use super::summary::zero_in_words;
 use crate::analysis::{Check, FittedFlow};
-use crate::field::{Flags, Sigma, Thickness};
+use crate::field::{Sigma, Thickness};
 use crate::io::field_file::{FieldFile, Variable, VariableData};
 
 fn variable(name: &str, data: Array2<f64>, units: String, long_name: &str) -> Variable {
@@ -96,18 +96,10 @@ pub fn psi_file(flow: &FittedFlow, context: &ReportContext) -> FieldFile {
 /// The cleaned field: measured vectors that passed the screening, fitted ones in their place and in narrow gaps; flags beside.
 pub fn clean_file(flow: &FittedFlow, context: &ReportContext) -> FieldFile {
     let units = &context.units;
-    let fill = |used: &Array2<f64>, fitted: &Array2<f64>| {
-        let mut out = used.clone();
-        Zip::from(&mut out).and(fitted).and(&flow.flags).for_each(|value, fit, flag| {
-            if flag.has(Flags::FILLED) {
-                *value = *fit;
-            }
-        });
-        out
-    };
+    let filled = flow.filled();
     let mut variables = vec![
-        variable("u", fill(&flow.used.u, &flow.u_fit), units.velocity(), "velocity along x, screened and filled"),
-        variable("v", fill(&flow.used.v, &flow.v_fit), units.velocity(), "velocity along y, screened and filled"),
+        variable("u", filled.u, units.velocity(), "velocity along x, screened and filled"),
+        variable("v", filled.v, units.velocity(), "velocity along y, screened and filled"),
     ];
     if let Some((su, sv)) = sigma_arrays(flow) {
         variables.push(variable("sigma_u", su, units.velocity(), "standard uncertainty of u (k = 1)"));
