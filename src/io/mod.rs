@@ -5,7 +5,7 @@ pub mod error;
 pub mod field_file;
 mod geometry;
 #[cfg(feature = "hdf5")]
-mod hdf5;
+pub mod hdf5;
 mod inputs;
 #[cfg(feature = "hdf5")]
 mod netcdf;
