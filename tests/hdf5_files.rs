@@ -5,6 +5,8 @@
 
 use std::collections::BTreeMap;
 use std::path::{Path, PathBuf};
+#[cfg(unix)]
+use std::sync::Mutex;
 
 use isopsi::field::{Axis, Flags, Grid, RemarkKind, UnitSystem};
 use isopsi::io::IoError;
@@ -13,6 +15,10 @@ use isopsi::io::hdf5::read_hdf5;
 use isopsi::io::raw::{RawAxis, RawFrame};
 use isopsi::io::request::ArrayRequest;
 use ndarray::Array2;
+
+/// A child process inherits files the C library has open, and their locks: no test starts one while another writes.
+#[cfg(unix)]
+static WRITING: Mutex<()> = Mutex::new(());
 
 fn file(name: &str) -> PathBuf {
     Path::new(env!("CARGO_MANIFEST_DIR")).join("tests/data/hdf5").join(name)
@@ -134,9 +140,13 @@ fn sigma_valid_and_solid_come_along_and_an_axis_called_depth_does_not() {
 #[test]
 fn square_grids_follow_scales_labels_meshes_and_the_order_asked_for() {
     let square = expected(5, 5, 0);
-    for name in
-        ["square_scales.h5", "square_labels.h5", "dimensions_without_values.nc", "mesh_square_transposed.h5", "matlab73_square.mat"]
-    {
+    for name in [
+        "square_scales.h5",
+        "square_labels.h5",
+        "dimensions_without_values.nc",
+        "mesh_square_transposed.h5",
+        "matlab73_square.mat",
+    ] {
         assert_eq!(read(name, &ArrayRequest::default()).u, square, "{name}");
     }
     let open = read("square.h5", &ArrayRequest::default());
@@ -185,7 +195,9 @@ fn what_cannot_be_used_is_refused_with_place_reason_and_advice() {
         let text = refusal(name, &plain);
         assert!(text.contains(name) && parts.iter().all(|p| text.contains(p)), "{name}: {text}");
     }
-    for (wanted, part) in [("x,x", "must each appear once"), ("t,y,x", "3 names for 2 dimensions"), ("q,y", "unknown letter")] {
+    for (wanted, part) in
+        [("x,x", "must each appear once"), ("t,y,x", "3 names for 2 dimensions"), ("q,y", "unknown letter")]
+    {
         let text = refusal("plain.h5", &order(wanted));
         assert!(text.contains(part) && text.contains("(4, 6)"), "{text}");
     }
@@ -244,6 +256,8 @@ fn sample() -> FieldFile {
 
 #[test]
 fn a_file_we_write_is_read_back_exactly() {
+    #[cfg(unix)]
+    let _alone = WRITING.lock().unwrap_or_else(|e| e.into_inner());
     let folder = tempfile::tempdir().unwrap();
     for name in ["field.h5", "field.nc"] {
         let (path, written) = (folder.path().join(name), sample());
@@ -279,7 +293,11 @@ fn child_writes_where_told() {
     let grid = Grid::new(Axis::uniform(0.0, 1.0, n).unwrap(), Axis::uniform(0.0, 1.0, n).unwrap());
     // Digits that do not pack.
     let data = Array2::from_shape_fn((n, n), |(j, i)| ((j * n + i) as f64 * 0.618_033_988_749).fract().sin());
-    let variable = |name: &str| Variable { name: name.to_owned(), data: VariableData::F64(data.clone()), ..sample().variables[0].clone() };
+    let variable = |name: &str| Variable {
+        name: name.to_owned(),
+        data: VariableData::F64(data.clone()),
+        ..sample().variables[0].clone()
+    };
     let file = FieldFile { grid, variables: ["u", "v", "psi"].map(variable).to_vec(), ..sample() };
     let error = write_field(Path::new(&path), &file).expect_err("the disk is full");
     println!("refused: {error}; blame {:?}", error.blame());
@@ -290,12 +308,15 @@ fn child_writes_where_told() {
 #[cfg(unix)]
 #[test]
 fn a_full_disk_is_an_error_that_leaves_nothing_behind() {
+    let _alone = WRITING.lock().unwrap_or_else(|e| e.into_inner());
     let folder = tempfile::tempdir().unwrap();
     let me = std::env::current_exe().unwrap();
     for (blocks, name) in [(1, "a.h5"), (8, "b.h5"), (100, "c.nc"), (1000, "d.h5"), (1000, "e.npz"), (100, "f.csv")] {
         let path = folder.path().join(name);
         // A signal would kill the process before the library sees the error: it is ignored, as a full disk sends none.
-        let script = format!("trap '' XFSZ; ulimit -f {blocks}; exec \"$0\" --exact child_writes_where_told --nocapture --test-threads 1");
+        let script = format!(
+            "trap '' XFSZ; ulimit -f {blocks}; exec \"$0\" --exact child_writes_where_told --nocapture --test-threads 1"
+        );
         let out = std::process::Command::new("bash")
             .args(["-c", &script])
             .arg(&me)
@@ -303,7 +324,12 @@ fn a_full_disk_is_an_error_that_leaves_nothing_behind() {
             .output()
             .unwrap();
         let text = String::from_utf8_lossy(&out.stdout);
-        assert!(out.status.success(), "{name} {blocks}: {:?}\n{text}\n{}", out.status, String::from_utf8_lossy(&out.stderr));
+        assert!(
+            out.status.success(),
+            "{name} {blocks}: {:?}\n{text}\n{}",
+            out.status,
+            String::from_utf8_lossy(&out.stderr)
+        );
         assert!(text.contains("refused: cannot write") && text.contains("Machine"), "{name}: {text}");
         assert_eq!(std::fs::read_dir(folder.path()).unwrap().count(), 0, "{name}");
     }

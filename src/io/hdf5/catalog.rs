@@ -2,9 +2,9 @@
 
 use std::collections::HashMap;
 
-use hdf5::{ObjectReference1, ReferencedObject};
 use hdf5::types::VarLenArray;
 use hdf5::{Dataset, File, Group};
+use hdf5::{ObjectReference1, ReferencedObject};
 use hdf5_sys::h5t::{H5T_class_t, H5T_order_t, H5T_sign_t, H5Tget_class, H5Tget_order, H5Tget_sign, H5Tget_size};
 
 use super::attributes::{text, texts};
@@ -307,15 +307,41 @@ fn unit_in_name(name: &str) -> Option<String> {
 fn synonyms(role: &str) -> &'static [&'static str] {
     match role {
         "u" => &[
-            "u", "ux", "vx", "uvel", "velu", "velx", "xvel", "uvelocity", "velocityu", "velocityx", "xvelocity",
-            "ucomponent", "uo",
+            "u",
+            "ux",
+            "vx",
+            "uvel",
+            "velu",
+            "velx",
+            "xvel",
+            "uvelocity",
+            "velocityu",
+            "velocityx",
+            "xvelocity",
+            "ucomponent",
+            "uo",
         ],
         "v" => &[
-            "v", "uy", "vy", "vvel", "velv", "vely", "yvel", "vvelocity", "velocityv", "velocityy", "yvelocity",
-            "vcomponent", "vo",
+            "v",
+            "uy",
+            "vy",
+            "vvel",
+            "velv",
+            "vely",
+            "yvel",
+            "vvelocity",
+            "velocityv",
+            "velocityy",
+            "yvelocity",
+            "vcomponent",
+            "vo",
         ],
-        "x" => &["x", "xc", "xcoord", "xcoordinate", "xcoordinates", "coordx", "xpos", "xposition", "posx", "positionx"],
-        "y" => &["y", "yc", "ycoord", "ycoordinate", "ycoordinates", "coordy", "ypos", "yposition", "posy", "positiony"],
+        "x" => {
+            &["x", "xc", "xcoord", "xcoordinate", "xcoordinates", "coordx", "xpos", "xposition", "posx", "positionx"]
+        }
+        "y" => {
+            &["y", "yc", "ycoord", "ycoordinate", "ycoordinates", "coordy", "ypos", "yposition", "posy", "positiony"]
+        }
         "t" => &["t", "time", "times", "timestamp", "timestamps"],
         "sigma_u" => &["sigmau", "usigma", "uncertaintyu", "uuncertainty"],
         "sigma_v" => &["sigmav", "vsigma", "uncertaintyv", "vuncertainty"],
@@ -380,7 +406,9 @@ fn class_of(dataset: &Dataset) -> Class {
             Class::Number(format!("{letter}{}{big}", 8 * size))
         }
         // Python's bool.
-        H5T_class_t::H5T_ENUM => Class::Number(format!("enumeration of {size} byte{}", if size == 1 { "" } else { "s" })),
+        H5T_class_t::H5T_ENUM => {
+            Class::Number(format!("enumeration of {size} byte{}", if size == 1 { "" } else { "s" }))
+        }
         H5T_class_t::H5T_STRING => Class::Other("text".to_owned()),
         H5T_class_t::H5T_COMPOUND => Class::Other("records (compound type, for example complex numbers)".to_owned()),
         H5T_class_t::H5T_ARRAY => Class::Other("arrays as elements".to_owned()),

@@ -34,12 +34,11 @@ pub const NODE_LIMIT: usize = 1 << 27;
 /// [`IoError::System`] when the file cannot be opened, [`IoError::Content`] with the dataset for everything that cannot be used.
 pub fn read_hdf5(path: &Path, request: &ArrayRequest) -> Result<RawFrame, IoError> {
     // The system's own refusals first: they are clearer than the library's.
-    let length = std::fs::File::open(path)
-        .and_then(|f| f.metadata())
-        .map_err(|e| IoError::system("read", path, e))?
-        .len();
+    let length =
+        std::fs::File::open(path).and_then(|f| f.metadata()).map_err(|e| IoError::system("read", path, e))?.len();
     values::prepare_library();
-    let file = File::open(path).map_err(|e| IoError::content(path, "content", values::opening_problem(&e.to_string())))?;
+    let file =
+        File::open(path).map_err(|e| IoError::content(path, "content", values::opening_problem(&e.to_string())))?;
     let reader = Reader { path, length, catalog: Catalog::of(&file, starts_with(path, b"MATLAB 7.3")), request };
     reader.frame()
 }
@@ -94,11 +93,12 @@ impl Reader<'_> {
             t: lengths(&t),
             x_changes_along: self.direction_of_mesh(x)?,
         };
-        let layout = Layout::decide(&u.shape, &known, self.request.order.as_deref(), u.matlab, &mut remarks)
-            .map_err(|problem| match problem {
+        let layout = Layout::decide(&u.shape, &known, self.request.order.as_deref(), u.matlab, &mut remarks).map_err(
+            |problem| match problem {
                 order::Problem::Setting(text) => IoError::setting("order", text),
                 order::Problem::Content(text) => self.bad(&u.path, text),
-            })?;
+            },
+        )?;
         let frames = layout.frames;
         if self.request.frame >= frames {
             return Err(IoError::content(
@@ -116,7 +116,11 @@ impl Reader<'_> {
             if !insisted && (!entry.is_numeric() || layout.selection(&entry.shape, 0).is_none()) {
                 remarks.push(Remark::new(
                     RemarkKind::Ignored,
-                    format!("{} {} does not fit the nodes of u and was left alone", entry.path, shape_text(&entry.shape)),
+                    format!(
+                        "{} {} does not fit the nodes of u and was left alone",
+                        entry.path,
+                        shape_text(&entry.shape)
+                    ),
                 ));
                 continue;
             }
@@ -257,7 +261,8 @@ impl Reader<'_> {
             mesh.axis_windows(ndarray::Axis(dim), 2)
                 .into_iter()
                 .map(|pair| {
-                    let (first, second) = (pair.index_axis(ndarray::Axis(dim), 0), pair.index_axis(ndarray::Axis(dim), 1));
+                    let (first, second) =
+                        (pair.index_axis(ndarray::Axis(dim), 0), pair.index_axis(ndarray::Axis(dim), 1));
                     first.iter().zip(second).map(|(&a, &b)| change(a, b)).sum::<f64>()
                 })
                 .sum()
@@ -412,7 +417,9 @@ fn wrong_rank(shape: &[usize]) -> String {
     if shape.contains(&0) {
         return format!("shape {} holds nothing", shape_text(shape));
     }
-    let advice = if n < 2 {
+    let advice = if n < 2 && shape.len() > 1 {
+        "; a plane field needs at least 2 x 2 nodes"
+    } else if n < 2 {
         "; a list of scattered points is read from a table (.csv)"
     } else {
         "; take one plane and one component"

@@ -138,9 +138,9 @@ impl Layout {
                 && fits(known.x.as_deref(), Role::X, roles, &tidy)
                 && fits(known.y.as_deref(), Role::Y, roles, &tidy)
                 && (!with_time || fits(known.t.as_deref(), Role::T, roles, &tidy))
-                && known.x_changes_along.is_none_or(|d| {
-                    roles.iter().filter(|r| **r != Role::T).position(|r| *r == Role::X) == Some(d)
-                })
+                && known
+                    .x_changes_along
+                    .is_none_or(|d| roles.iter().filter(|r| **r != Role::T).position(|r| *r == Role::X) == Some(d))
         };
         let mut possible: Vec<&[Role]> = orders.iter().filter(|o| meets(o, true)).copied().collect();
         if possible.is_empty() {
@@ -298,7 +298,11 @@ mod tests {
             (vec![1, 4, 1, 6], false, 1),
         ] {
             let (layout, _) = decide(&shape, &known, None);
-            assert_eq!((layout.ny, layout.nx, layout.transposed, layout.frames), (4, 6, transposed, frames), "{shape:?}");
+            assert_eq!(
+                (layout.ny, layout.nx, layout.transposed, layout.frames),
+                (4, 6, transposed, frames),
+                "{shape:?}"
+            );
         }
         assert!(Layout::decide(&[5, 6], &known, None, false, &mut Vec::new()).is_err());
     }

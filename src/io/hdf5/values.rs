@@ -28,7 +28,7 @@ pub fn prepare_library() {
 pub fn opening_problem(text: &str) -> String {
     if text.contains("truncated file") {
         format!("the file is cut off ({text}); copy it again or close the program that writes it")
-    } else if text.contains("lock") {
+    } else if text.contains("lock file") || text.contains("open for write") {
         format!("another program has the file open for writing ({text}); close it there")
     } else {
         format!("the HDF5 library cannot open it ({text}); the file is damaged, cut off, or of a newer format")
@@ -101,10 +101,7 @@ fn check_storage(dataset: &Dataset, entry: &Entry, file_length: u64) -> Result<O
     }
     let stored = dataset.storage_size();
     if stored == 0 {
-        return Err(format!(
-            "shape {} was announced but no value was ever written",
-            super::shape_text(&entry.shape)
-        ));
+        return Err(format!("shape {} was announced but no value was ever written", super::shape_text(&entry.shape)));
     }
     if stored > file_length {
         return Err(format!(
