@@ -2,6 +2,7 @@
 //!
 //! The inputs in tests/data/hdf5 come from h5py and netCDF4 (tests/data/make_hdf5.py); their content is stated there.
 #![cfg(feature = "hdf5")]
+#![allow(clippy::panic, clippy::unwrap_used, clippy::print_stdout, reason = "a test stops where it fails")]
 
 use std::collections::BTreeMap;
 use std::path::{Path, PathBuf};
