@@ -78,6 +78,9 @@ impl Default for CellOptions {
 /// Loops just inside a bounding level lie this share of the flux of the cell from it; area is extrapolated from there.
 const INSIDE: f64 = 2e-3;
 
+/// Steps on large smooth loops may be this long, in node spacings; the tolerance of chords holds for them too.
+const LONGEST: f64 = 4.0;
+
 /// Levels tried between the last closed loop and the rim of the data.
 const RIM_BISECTIONS: usize = 14;
 
@@ -126,6 +129,7 @@ fn find_cell(
 ) -> Option<Cell> {
     let at = [center.x, center.y];
     let mut walker = Walker::new(scene.surface, options.tolerance);
+    walker.longest = LONGEST * walker.h;
     let jet = walker.eval(at)?;
     let maximum = jet.psi_xx + jet.psi_yy < 0.0;
     let sign = if maximum { -1.0 } else { 1.0 };

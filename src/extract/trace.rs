@@ -34,6 +34,8 @@ pub struct Walker<'a> {
     pub h: f64,
     /// Largest distance of a chord from the line.
     pub tolerance: f64,
+    /// Longest step.
+    pub longest: f64,
     scale: f64,
     cell: Option<(usize, usize)>,
     bezier: [[f64; 4]; 4],
@@ -44,7 +46,7 @@ impl<'a> Walker<'a> {
     pub fn new(surface: &'a PsiSurface, tolerance: f64) -> Self {
         let h = surface.grid().spacing();
         let scale = surface.range().map_or(1.0, |(low, high)| high - low);
-        Self { surface, h, tolerance: tolerance * h, scale, cell: None, bezier: [[0.0; 4]; 4] }
+        Self { surface, h, tolerance: tolerance * h, longest: h, scale, cell: None, bezier: [[0.0; 4]; 4] }
     }
 
     /// Value and derivatives at a point.
@@ -72,7 +74,7 @@ impl<'a> Walker<'a> {
                 return None;
             }
             p = [p[0] + miss * jet.psi_x / g2, p[1] + miss * jet.psi_y / g2];
-            if distance(p, start) > self.h {
+            if distance(p, start) > self.longest {
                 return None;
             }
             jet = self.eval(p)?;
@@ -109,7 +111,7 @@ impl<'a> Walker<'a> {
                 + jet.psi_yy * jet.psi_x * jet.psi_x)
                 .abs()
                 / speed.powi(3);
-            let mut length = (8.0 * self.tolerance / bend).sqrt().min(self.h);
+            let mut length = (8.0 * self.tolerance / bend).sqrt().min(self.longest);
             let mut nearest = f64::INFINITY;
             for (k, &target) in targets.iter().enumerate() {
                 let d = distance(p, target);
@@ -123,7 +125,7 @@ impl<'a> Walker<'a> {
             // Close when the start lies ahead within a step.
             let back = [start[0] - p[0], start[1] - p[1]];
             let gap = back[0].hypot(back[1]);
-            left_start |= travelled > 3.0 * gap.max(1e-3 * self.h) || travelled > 4.0 * self.h;
+            left_start |= travelled > 3.0 * gap.max(1e-3 * self.h) || travelled > 4.0 * self.longest;
             if left_start && line.len() > 3 && gap <= 1.2 * length && back[0] * tangent[0] + back[1] * tangent[1] > 0.0
             {
                 let middle = [p[0] + 0.5 * back[0], p[1] + 0.5 * back[1]];

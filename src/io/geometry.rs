@@ -138,7 +138,7 @@ pub fn plane_file(path: &Path, shape: (usize, usize), what: &str) -> Result<Arra
                 })?);
             }
         }
-        let columns = if rows > 0 { values.len() / rows } else { 0 };
+        let columns = values.len().checked_div(rows).unwrap_or(0);
         Array2::from_shape_vec((rows, columns), values).map_err(|_| {
             IoError::content(path, "rows", format!("ragged: the rows of the {what} have different lengths"))
         })?

@@ -180,7 +180,7 @@ impl Scales {
             if unit.1.is_none() {
                 return Err(IoError::setting("[geometry] scale", "the length of a pixel cannot be in pixels"));
             }
-            let step = interval.map(|(t, unit)| (t, unit));
+            let step = interval;
             // Data with a pixel scale are in pixels unless they say otherwise.
             if length_unit.is_none_or(|u| u.1.is_none()) {
                 length_factor = size;
