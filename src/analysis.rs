@@ -20,7 +20,7 @@ use crate::numerics::fill::fill_gaps;
 use crate::numerics::helmholtz::{ResidualShare, residual_share};
 use crate::numerics::screening::{ScreenOptions, screen};
 use crate::numerics::solver::StopReason;
-use crate::numerics::stream_function::{FitError, FitOptions, StreamFit, solve_stream_function};
+use crate::numerics::stream_function::{DIRECT_TOLERANCE, FitError, FitOptions, StreamFit, solve_stream_function};
 use crate::numerics::surface::PsiSurface;
 
 /// Settings of an analysis.
@@ -257,6 +257,9 @@ pub fn fit_flow(
     Ok(FittedFlow { measured: field.clone(), used, flags, fit, surface, extended, u_fit, v_fit, remarks })
 }
 
+/// Relative residual of the fits that only serve the screening.
+const ROUGH_TOLERANCE: f64 = 1e-6;
+
 /// Screens by medians and against the fit; the last fit is kept when nothing more was rejected.
 fn screened(
     field: &VelocityField,
@@ -264,9 +267,11 @@ fn screened(
     options: &FitOptions,
     remarks: &mut Vec<Remark>,
 ) -> Result<(VelocityField, StreamFit), AnalysisError> {
+    // While vectors are still being judged a rougher solution tells as much; the fit that is kept has the full tolerance.
+    let rough = FitOptions { tolerance: options.tolerance.max(ROUGH_TOLERANCE), ..options.clone() };
     let mut last: Option<(Array2<bool>, StreamFit)> = None;
     let found = screen(field, screening, |kept| {
-        let fit = solve_stream_function(kept, options).ok()?;
+        let fit = solve_stream_function(kept, &rough).ok()?;
         let filled = fill_gaps(&kept.domain, &fit.psi, &fit.component);
         let velocity = fitted_velocity(kept, &PsiSurface::new(kept.grid(), &filled.psi));
         last = Some((kept.valid.clone(), fit));
@@ -283,7 +288,11 @@ fn screened(
     }
     let used = found.apply(field);
     match last {
-        Some((valid, fit)) if valid == used.valid => Ok((used, fit)),
+        Some((valid, fit))
+            if valid == used.valid && fit.solve.relative_residual <= options.tolerance.max(DIRECT_TOLERANCE) =>
+        {
+            Ok((used, fit))
+        }
         _ => {
             let fit = solve_stream_function(&used, options)?;
             Ok((used, fit))

@@ -160,41 +160,50 @@ fn solve(domain: &Domain, psi: &Array2<f64>, unknown: &Array2<usize>, count: usi
     // Rows of the normal matrix as windows of (2 * REACH + 1)^2 neighbors.
     let mut window = vec![[0.0f64; WINDOW * WINDOW]; count];
     let mut right = vec![0.0f64; count];
+    let members: Vec<(usize, usize)> = unknown.indexed_iter().filter(|(_, k)| **k != OPEN).map(|(at, _)| at).collect();
     for along_y in 0..=order {
         let along_x = order - along_y;
         let binomial = (0..along_y).fold(1.0, |b, k| b * (order - k) as f64 / (k + 1) as f64);
         let scale = binomial.sqrt() * ratio_y.powi(along_y as i32) * ratio_x.powi(along_x as i32);
-        for j in 0..ny.saturating_sub(along_y) {
-            for i in 0..nx.saturating_sub(along_x) {
-                let nodes = |a: usize, b: usize| [j + a, i + b];
-                let mut touches = false;
-                let usable = (0..=along_y).all(|a| {
-                    (0..=along_x).all(|b| {
-                        let filled = unknown[nodes(a, b)] != OPEN;
-                        touches |= filled;
-                        filled || psi[nodes(a, b)].is_finite()
-                    })
-                });
-                if !usable || !touches {
-                    continue;
-                }
-                let (wy, wx) = (difference(&grid.y, j, along_y), difference(&grid.x, i, along_x));
-                let weight = |a: usize, b: usize| scale * wy[a] * wx[b];
-                for a in 0..=along_y {
-                    for b in 0..=along_x {
-                        let k = unknown[nodes(a, b)];
-                        if k == OPEN {
-                            continue;
-                        }
-                        for c in 0..=along_y {
-                            for d in 0..=along_x {
-                                let product = weight(a, b) * weight(c, d);
-                                let other = nodes(c, d);
-                                if unknown[other] == OPEN {
-                                    right[k] -= product * psi[other];
-                                } else {
-                                    window[k][(REACH + c - a) * WINDOW + REACH + d - b] += product;
-                                }
+        // Only stencils that reach an unknown node matter.
+        let mut starts: Vec<(usize, usize)> = members
+            .iter()
+            .flat_map(|&(j, i)| {
+                (j.saturating_sub(along_y)..=j).flat_map(move |a| (i.saturating_sub(along_x)..=i).map(move |b| (a, b)))
+            })
+            .filter(|&(j, i)| j + along_y < ny && i + along_x < nx)
+            .collect();
+        starts.sort_unstable();
+        starts.dedup();
+        for (j, i) in starts {
+            let nodes = |a: usize, b: usize| [j + a, i + b];
+            let mut touches = false;
+            let usable = (0..=along_y).all(|a| {
+                (0..=along_x).all(|b| {
+                    let filled = unknown[nodes(a, b)] != OPEN;
+                    touches |= filled;
+                    filled || psi[nodes(a, b)].is_finite()
+                })
+            });
+            if !usable || !touches {
+                continue;
+            }
+            let (wy, wx) = (difference(&grid.y, j, along_y), difference(&grid.x, i, along_x));
+            let weight = |a: usize, b: usize| scale * wy[a] * wx[b];
+            for a in 0..=along_y {
+                for b in 0..=along_x {
+                    let k = unknown[nodes(a, b)];
+                    if k == OPEN {
+                        continue;
+                    }
+                    for c in 0..=along_y {
+                        for d in 0..=along_x {
+                            let product = weight(a, b) * weight(c, d);
+                            let other = nodes(c, d);
+                            if unknown[other] == OPEN {
+                                right[k] -= product * psi[other];
+                            } else {
+                                window[k][(REACH + c - a) * WINDOW + REACH + d - b] += product;
                             }
                         }
                     }
