@@ -178,6 +178,7 @@ pub fn draw(job: &Job<'_>, flow: &FittedFlow, check: &Check, features: &Features
         contours: &features.lines,
         points: &features.points,
         background,
+        flags: Some(&flow.flags),
         units,
         psi_sign: sign,
         psi_step: step_of(features),

@@ -1,10 +1,16 @@
 //! From data to page: scale, round ticks, frame, tick labels.
 
-use super::font::{self, CAP_HEIGHT};
-use super::scene::{Anchor, Ink, Item, Scene, Style, TextBox};
+use super::font::{self, CAP_HEIGHT, quantity};
+use super::scene::{Anchor, Ink, Scene, Span, Style, TextStyle};
 
 /// Dark ink of axes and text.
 pub const DARK: Ink = Ink::solid(0x1b, 0x1f, 0x24);
+
+/// Length of ticks in millimeters; longer than the strokes of a wall.
+const TICK: f64 = 1.2;
+
+/// Distance from a tick to its label in millimeters.
+const TICK_GAP: f64 = 0.6;
 
 /// The plot on the page: data range and place.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -29,58 +35,104 @@ impl Plot {
     pub fn place(&self, p: [f64; 2]) -> [f64; 2] {
         [self.at[0] + (p[0] - self.x[0]) * self.scale, self.at[1] + (self.y[1] - p[1]) * self.scale]
     }
-}
 
-/// Round tick positions in a range, about `count` of them, and the decimals they need.
-pub fn ticks(low: f64, high: f64, count: usize) -> (Vec<f64>, usize) {
-    let raw = (high - low) / count.max(1) as f64;
-    if !(raw > 0.0 && raw.is_finite()) {
-        return (vec![low], 2);
+    /// Whether the y axis is too short for its label along it, which then stands above the plot.
+    pub fn label_above(&self, unit: &str, size: f64) -> bool {
+        font::width(&quantity("y", common_power(self.y), unit)) * size > self.size()[1]
     }
-    let power = 10f64.powf(raw.log10().floor());
-    let step = [1.0, 2.0, 5.0, 10.0].into_iter().map(|m| m * power).find(|s| *s >= raw * 0.999).unwrap_or(10.0 * power);
-    let decimals = (-step.log10().floor()).max(0.0) as usize;
-    let first = (low / step - 1e-9).ceil() as i64;
-    let last = (high / step + 1e-9).floor() as i64;
-    ((first..=last).map(|k| k as f64 * step).collect(), decimals)
 }
 
-/// A tick as text: few digits, a power of ten apart for very large and small numbers.
-pub fn tick_text(value: f64, decimals: usize, power: i32) -> String {
-    let scaled = value / 10f64.powi(power);
-    let text = format!("{scaled:.0$}", (decimals as i32 + power).max(0) as usize);
-    let text = if text.trim_start_matches('-').chars().all(|c| c == '0' || c == '.') { "0".to_owned() } else { text };
-    text.replace('-', "−")
+/// Ticks of an axis.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Ticks {
+    /// Positions, round, within the range.
+    pub values: Vec<f64>,
+    /// Power of ten taken out of the labels.
+    pub power: i32,
+    /// Decimals of the labels after that.
+    decimals: usize,
 }
 
-/// Power of ten taken out of the tick labels of an axis.
-pub fn common_power(low: f64, high: f64) -> i32 {
+impl Ticks {
+    /// About `count` round ticks in a range; none for a range that is empty or not finite.
+    pub fn new(range: [f64; 2], count: usize) -> Self {
+        let [low, high] = range;
+        let power = common_power(range);
+        let none = Self { values: Vec::new(), power, decimals: 0 };
+        let raw = (high - low) / count.max(1) as f64;
+        if !raw.is_normal() || raw < 0.0 {
+            return none;
+        }
+        let ten = 10f64.powf(raw.log10().floor());
+        let Some(step) = [1.0, 2.0, 5.0, 10.0].into_iter().map(|m| m * ten).find(|s| *s >= raw * 0.999) else {
+            return none;
+        };
+        let (first, last) = ((low / step - 1e-9).ceil(), (high / step + 1e-9).floor());
+        // A range lost in the rounding of its position has no ticks to tell apart.
+        if !(last - first <= 2.0 * count.max(1) as f64 + 2.0) || first.abs().max(last.abs()) > 1e12 {
+            return none;
+        }
+        let decimals = (f64::from(power) - (step.log10() + 1e-9).floor()).clamp(0.0, 15.0) as usize;
+        Self { values: (first as i64..=last as i64).map(|k| k as f64 * step).collect(), power, decimals }
+    }
+
+    /// Label of a tick.
+    pub fn label(&self, value: f64) -> Vec<Span> {
+        let scaled = value / 10f64.powi(self.power);
+        let text = format!("{scaled:.0$}", self.decimals);
+        let zero = text.chars().all(|c| matches!(c, '0' | '.' | '-'));
+        font::spans(&if zero { "0".to_owned() } else { text.replace('-', "−") })
+    }
+
+    /// Width of the widest label at a font size.
+    pub fn widest(&self, size: f64) -> f64 {
+        self.values.iter().map(|&v| font::width(&self.label(v)) * size).fold(0.0, f64::max)
+    }
+}
+
+/// Power of ten taken out of the labels of a range: 0 for everyday numbers.
+pub fn common_power([low, high]: [f64; 2]) -> i32 {
     let largest = low.abs().max(high.abs());
-    if largest > 0.0 && !(1e-2..1e5).contains(&largest) { largest.log10().floor() as i32 } else { 0 }
+    if largest.is_normal() && !(1e-2..1e5).contains(&largest) { largest.log10().floor() as i32 } else { 0 }
 }
 
-/// Adds a text and the box it takes.
-pub fn put_text(
-    scene: &mut Scene,
-    at: [f64; 2],
-    text: &str,
-    size: f64,
-    angle: f64,
-    anchor: Anchor,
-    italic: bool,
-    halo: bool,
-) {
-    let half = 0.5 * font::width(text, italic) * size;
-    let (s, c) = angle.to_radians().sin_cos();
-    let along = match anchor {
-        Anchor::Start => half,
-        Anchor::Middle => 0.0,
-        Anchor::End => -half,
+/// Ticks of the y axis for a plot height on the page.
+pub fn vertical_ticks(range: [f64; 2], height: f64, size: f64) -> Ticks {
+    let most = ((height / (3.2 * size)) as usize).clamp(1, 9);
+    (1..=most)
+        .rev()
+        .map(|count| Ticks::new(range, count))
+        .find(|t| t.values.len() < 2 || height / (range[1] - range[0]) * (t.values[1] - t.values[0]) > 1.6 * size)
+        .unwrap_or_else(|| Ticks::new(range, 1))
+}
+
+/// Ticks of a horizontal axis of a length on the page: as many as stand with a letter between them.
+pub fn horizontal_ticks(range: [f64; 2], length: f64, size: f64) -> Ticks {
+    let most = ((length / (5.0 * size)) as usize).clamp(1, 9);
+    let fits = |t: &Ticks| {
+        let step = t.values.windows(2).map(|w| w[1] - w[0]).fold(f64::INFINITY, f64::min);
+        t.widest(size) + size < step * length / (range[1] - range[0])
     };
-    let up = -0.5 * CAP_HEIGHT * size;
-    let center = [at[0] + c * along - s * up, at[1] + s * along + c * up];
-    scene.boxes.push(TextBox { center, half: [half, 0.5 * CAP_HEIGHT * size], angle });
-    scene.items.push(Item::Text { at, text: text.to_owned(), size, angle, anchor, italic, halo });
+    let mut ticks = (1..=most).rev().map(|count| Ticks::new(range, count)).find(fits).unwrap_or_else(|| {
+        let mut one = Ticks::new(range, 1);
+        one.values.truncate(1);
+        one
+    });
+    if ticks.widest(size) > length + 4.0 * size {
+        ticks.values.clear();
+    }
+    ticks
+}
+
+/// Room left of the plot for the labels of the y axis.
+pub fn room_left(range: [f64; 2], height: f64, size: f64, above: bool) -> f64 {
+    let label = if above { 0.0 } else { 1.4 + 1.3 * size };
+    TICK + TICK_GAP + vertical_ticks(range, height, size).widest(size) + label
+}
+
+/// Room below the plot for the labels of the x axis.
+pub fn room_below(size: f64) -> f64 {
+    TICK + TICK_GAP + 2.0 + 2.0 * size
 }
 
 /// Frame, ticks and labels around the plot.
@@ -89,75 +141,81 @@ pub fn draw_axes(scene: &mut Scene, plot: &Plot, unit: &str, size: f64) {
     let [x0, y0] = plot.at;
     let thin = Style::line(DARK, 0.2);
     scene.path(vec![[x0, y0], [x0 + w, y0], [x0 + w, y0 + h], [x0, y0 + h]], true, thin.clone());
-    let unit = font::typeset_unit(unit);
-    let label = |name: &str, power: i32| {
-        let ten = if power == 0 { String::new() } else { format!("10{} ", superscript(power)) };
-        format!("{name} ({ten}{unit})")
-    };
-    // Horizontal: as many ticks as fit with a letter between.
-    let px = common_power(plot.x[0], plot.x[1]);
-    let mut count = ((w / (5.0 * size)) as usize).clamp(2, 9);
-    let (mut xs, mut dx) = ticks(plot.x[0], plot.x[1], count);
-    while count > 1 && xs.len() > 1 {
-        let widest = xs.iter().map(|&t| font::width(&tick_text(t, dx, px), false) * size).fold(0.0, f64::max);
-        if widest + size < (xs[1] - xs[0]) * plot.scale {
-            break;
-        }
-        count -= 1;
-        (xs, dx) = ticks(plot.x[0], plot.x[1], count);
-    }
-    for &t in &xs {
+    let middle = TextStyle::new(size, Anchor::Middle);
+
+    let ticks = horizontal_ticks(plot.x, w, size);
+    for &t in &ticks.values {
         let p = plot.place([t, plot.y[0]]);
-        scene.path(vec![p, [p[0], p[1] + 1.2]], false, thin.clone());
-        put_text(
-            scene,
-            [p[0], p[1] + 1.6 + CAP_HEIGHT * size],
-            &tick_text(t, dx, px),
-            size,
-            0.0,
-            Anchor::Middle,
-            false,
-            false,
-        );
+        scene.path(vec![p, [p[0], p[1] + TICK]], false, thin.clone());
+        scene.text([p[0], p[1] + TICK + TICK_GAP + CAP_HEIGHT * size], ticks.label(t), middle);
     }
-    put_text(
-        scene,
-        [x0 + 0.5 * w, y0 + h + 2.2 + 1.95 * size],
-        &label("x", px),
-        size,
-        0.0,
-        Anchor::Middle,
-        false,
-        false,
-    );
-    let py = common_power(plot.y[0], plot.y[1]);
-    let (ys, dy) = ticks(plot.y[0], plot.y[1], ((h / (3.2 * size)) as usize).clamp(1, 9));
-    let mut widest: f64 = 0.0;
-    for &t in &ys {
+    let baseline = y0 + h + TICK + TICK_GAP + 1.2 + 1.7 * size;
+    put_fitting(scene, [x0 + 0.5 * w, baseline], quantity("x", ticks.power, unit), middle, scene.width - 4.0);
+
+    let ticks = vertical_ticks(plot.y, h, size);
+    for &t in &ticks.values {
         let p = plot.place([plot.x[0], t]);
-        let text = tick_text(t, dy, py);
-        widest = widest.max(font::width(&text, false) * size);
-        scene.path(vec![p, [p[0] - 1.2, p[1]]], false, thin.clone());
-        put_text(scene, [p[0] - 1.8, p[1] + 0.5 * CAP_HEIGHT * size], &text, size, 0.0, Anchor::End, false, false);
+        scene.path(vec![p, [p[0] - TICK, p[1]]], false, thin.clone());
+        let at = [p[0] - TICK - TICK_GAP, p[1] + 0.5 * CAP_HEIGHT * size];
+        scene.text(at, ticks.label(t), TextStyle::new(size, Anchor::End));
     }
-    put_text(scene, [x0 - 3.0 - widest, y0 + 0.5 * h], &label("y", py), size, -90.0, Anchor::Middle, false, false);
+    let label = quantity("y", ticks.power, unit);
+    let left = x0 - TICK - TICK_GAP - ticks.widest(size);
+    if plot.label_above(unit, size) {
+        // Two letters above the frame, clear of the uppermost tick label.
+        put_fitting(
+            scene,
+            [left.max(2.0), y0 - 0.9 * size],
+            label,
+            TextStyle::new(size, Anchor::Start),
+            scene.width - left,
+        );
+    } else {
+        scene.text([left - 1.4 - 0.25 * size, y0 + 0.5 * h], label, middle.turned(-90.0));
+    }
 }
 
-/// A whole number as superscript.
-pub fn superscript(power: i32) -> String {
-    font::typeset_unit(&format!("x{power}")).trim_start_matches('x').to_owned()
+/// Adds a text, smaller when it is wider than `room`; a centered one is moved to stay on the page.
+pub fn put_fitting(scene: &mut Scene, at: [f64; 2], spans: Vec<Span>, style: TextStyle, room: f64) {
+    let width = font::width(&spans) * style.size;
+    let fit = (room.max(1.0) / width).min(1.0);
+    let half = 0.5 * width * fit;
+    let x = match style.anchor {
+        Anchor::Middle => {
+            at[0].clamp((half + 1.0).min(0.5 * scene.width), (scene.width - half - 1.0).max(0.5 * scene.width))
+        }
+        _ => at[0],
+    };
+    scene.text([x, at[1]], spans, TextStyle { size: style.size * fit, ..style });
 }
 
 #[cfg(test)]
 mod tests {
     use super::*;
 
+    fn labels(range: [f64; 2], count: usize) -> (Vec<String>, i32) {
+        let t = Ticks::new(range, count);
+        (t.values.iter().map(|&v| t.label(v)[0].text.clone()).collect(), t.power)
+    }
+
     #[test]
     fn ticks_are_round_and_inside() {
-        let (t, d) = ticks(-0.13, 1.07, 6);
-        assert_eq!((t.first().copied(), t.last().copied(), d), (Some(0.0), Some(1.0), 1));
-        assert_eq!(tick_text(-0.0, 1, 0), "0");
-        assert_eq!(tick_text(2.5e-7, 8, -7), "2.5");
-        assert_eq!(superscript(-7), "⁻⁷");
+        assert_eq!(labels([-0.13, 1.07], 6), (["0", "0.2", "0.4", "0.6", "0.8", "1.0"].map(String::from).to_vec(), 0));
+        assert_eq!(labels([-40.0, 40.0], 4).0, ["−40", "−20", "0", "20", "40"]);
+    }
+
+    #[test]
+    fn a_power_of_ten_is_taken_out_of_large_and_small_numbers() {
+        assert_eq!(labels([0.0, 2.5e-7], 3), (["0", "1", "2"].map(String::from).to_vec(), -7));
+        assert_eq!(labels([0.0, 3.2e9], 3), (["0", "2"].map(String::from).to_vec(), 9));
+        assert_eq!(labels([0.0, 1.2e6], 3), (["0", "0.5", "1.0"].map(String::from).to_vec(), 6));
+    }
+
+    #[test]
+    fn ranges_without_extent_have_no_ticks() {
+        for range in [[1.0, 1.0], [0.0, f64::INFINITY], [f64::NAN, 1.0], [0.0, 1e-320], [-f64::MAX, f64::MAX]] {
+            assert!(Ticks::new(range, 5).values.is_empty(), "{range:?}");
+        }
+        assert!(Ticks::new([1e20, 1e20 + 3e4], 5).values.len() < 8);
     }
 }

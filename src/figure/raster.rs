@@ -12,7 +12,7 @@ use resvg::usvg::{Options, Tree, fontdb};
 use super::font::{FAMILY, OBLIQUE, REGULAR};
 
 /// Why a figure could not be written.
-#[derive(Debug, Clone, PartialEq, Eq, thiserror::Error)]
+#[derive(Debug, Clone, PartialEq, thiserror::Error)]
 #[non_exhaustive]
 pub enum FigureError {
     /// The SVG was not understood: a defect of this program.
@@ -20,6 +20,24 @@ pub enum FigureError {
     Svg {
         /// What the parser said.
         reason: String,
+    },
+    /// No text fits on the page.
+    #[error(
+        "a figure {width_mm} mm wide with letters of {font_size_pt} pt cannot be laid out; choose 30 to 1000 mm and 4 to 24 pt"
+    )]
+    Page {
+        /// Width of the page.
+        width_mm: f64,
+        /// Font size.
+        font_size_pt: f64,
+    },
+    /// The coordinates cannot be scaled to a page.
+    #[error("coordinates from {x:?} by {y:?} cannot be drawn to scale")]
+    Range {
+        /// Range of x.
+        x: [f64; 2],
+        /// Range of y.
+        y: [f64; 2],
     },
     /// The image would be too large.
     #[error("an image of {width} x {height} pixels is too large; choose a smaller width")]

@@ -1,5 +1,7 @@
 //! Drawing list in millimeters, x to the right, y down; no file format.
 
+use super::font;
+
 /// A color with opacity.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct Ink {
@@ -56,6 +58,41 @@ pub enum Anchor {
     End,
 }
 
+/// A stretch of text in one slant.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Span {
+    /// What it says.
+    pub text: String,
+    /// Slanted letters.
+    pub italic: bool,
+}
+
+/// How a text stands on the page.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct TextStyle {
+    /// Font size in millimeters.
+    pub size: f64,
+    /// Rotation in degrees, clockwise.
+    pub angle: f64,
+    /// Where it hangs.
+    pub anchor: Anchor,
+    /// Faint white rim that keeps it readable on a colored field.
+    pub halo: bool,
+}
+
+impl TextStyle {
+    /// Level text without rim.
+    pub fn new(size: f64, anchor: Anchor) -> Self {
+        Self { size, angle: 0.0, anchor, halo: false }
+    }
+
+    /// The same, rotated clockwise by degrees.
+    #[must_use]
+    pub fn turned(self, angle: f64) -> Self {
+        Self { angle, ..self }
+    }
+}
+
 /// One thing to draw.
 #[derive(Debug, Clone, PartialEq)]
 pub enum Item {
@@ -71,17 +108,9 @@ pub enum Item {
         /// Baseline position.
         at: [f64; 2],
         /// What it says.
-        text: String,
-        /// Height of the letters in millimeters (font size).
-        size: f64,
-        /// Rotation in degrees, clockwise.
-        angle: f64,
-        /// Where it hangs.
-        anchor: Anchor,
-        /// Slanted letters.
-        italic: bool,
-        /// White rim that keeps it readable on lines.
-        halo: bool,
+        spans: Vec<Span>,
+        /// How it stands.
+        style: TextStyle,
     },
     /// A PNG image stretched over a rectangle.
     Image {
@@ -115,6 +144,11 @@ pub struct TextBox {
 }
 
 impl TextBox {
+    /// Box along the page.
+    pub fn level(center: [f64; 2], half: [f64; 2]) -> Self {
+        Self { center, half, angle: 0.0 }
+    }
+
     /// Corners in order.
     pub fn corners(&self) -> [[f64; 2]; 4] {
         let (s, c) = self.angle.to_radians().sin_cos();
@@ -126,6 +160,10 @@ impl TextBox {
 
     /// Whether two boxes overlap (separating axes).
     pub fn overlaps(&self, other: &TextBox) -> bool {
+        let apart = (self.center[0] - other.center[0]).hypot(self.center[1] - other.center[1]);
+        if apart >= self.half[0].hypot(self.half[1]) + other.half[0].hypot(other.half[1]) {
+            return false;
+        }
         let (p, q) = (self.corners(), other.corners());
         [self.angle, self.angle + 90.0, other.angle, other.angle + 90.0].into_iter().all(|angle| {
             let (s, c) = angle.to_radians().sin_cos();
@@ -162,6 +200,26 @@ impl Scene {
         if !pieces.is_empty() {
             self.items.push(Item::Path { pieces, style });
         }
+    }
+
+    /// Adds a text at a baseline position and the box its ink takes.
+    pub fn text(&mut self, at: [f64; 2], spans: Vec<Span>, style: TextStyle) {
+        let ink = font::extent(&spans);
+        if ink.width == 0.0 {
+            return;
+        }
+        let half = 0.5 * ink.width * style.size;
+        let (s, c) = style.angle.to_radians().sin_cos();
+        let along = match style.anchor {
+            Anchor::Start => half,
+            Anchor::Middle => 0.0,
+            Anchor::End => -half,
+        };
+        let down = 0.5 * (ink.below - ink.above) * style.size;
+        let center = [at[0] + c * along - s * down, at[1] + s * along + c * down];
+        let height = 0.5 * (ink.above + ink.below) * style.size;
+        self.boxes.push(TextBox { center, half: [half, height], angle: style.angle });
+        self.items.push(Item::Text { at, spans, style });
     }
 
     /// Adds a circle as a polygon fine enough for print.

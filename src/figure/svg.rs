@@ -5,10 +5,15 @@ use std::fmt::Write;
 use base64::Engine;
 
 use super::font::FAMILY;
-use super::scene::{Anchor, Ink, Item, Scene, Style};
+use super::scene::{Anchor, Ink, Item, Scene, Span, Style, TextStyle};
+
+/// Width of the rim around texts on a field, over the font size.
+const HALO: f64 = 0.16;
 
 /// A number with at most three decimals, without trailing zeros.
 fn number(value: f64) -> String {
+    // What is not a number must not spoil the document; the layout leaves such points out before.
+    let value = if value.is_finite() { value } else { 0.0 };
     let text = format!("{value:.3}");
     let text = text.trim_end_matches('0').trim_end_matches('.');
     if text == "-0" { "0".to_owned() } else { text.to_owned() }
@@ -55,6 +60,37 @@ fn look(style: &Style) -> String {
     out
 }
 
+fn write_text(out: &mut String, at: [f64; 2], spans: &[Span], style: &TextStyle) {
+    let anchor = match style.anchor {
+        Anchor::Start => "start",
+        Anchor::Middle => "middle",
+        Anchor::End => "end",
+    };
+    let (x, y, size) = (number(at[0]), number(at[1]), number(style.size));
+    let turn = match number(style.angle).as_str() {
+        "0" => String::new(),
+        angle => format!(" transform=\"rotate({angle} {x} {y})\""),
+    };
+    let all_italic = spans.iter().all(|s| s.italic);
+    let slant = if all_italic { " font-style=\"italic\"" } else { "" };
+    let body: String = spans
+        .iter()
+        .map(|span| match span.italic && !all_italic {
+            true => format!("<tspan font-style=\"italic\">{}</tspan>", escape(&span.text)),
+            false => escape(&span.text),
+        })
+        .collect();
+    let base = format!("x=\"{x}\" y=\"{y}\" font-size=\"{size}\" text-anchor=\"{anchor}\"{slant}{turn}");
+    if style.halo {
+        let rim = number(HALO * style.size);
+        let _ = writeln!(
+            out,
+            "<text {base} fill=\"none\" stroke=\"#ffffff\" stroke-width=\"{rim}\" stroke-opacity=\"0.7\" stroke-linejoin=\"round\">{body}</text>",
+        );
+    }
+    let _ = writeln!(out, "<text {base} fill=\"#1b1f24\">{body}</text>");
+}
+
 /// The scene as an SVG document of the stated size in millimeters.
 pub fn to_svg(scene: &Scene, title: &str) -> String {
     let mut out = String::new();
@@ -86,34 +122,7 @@ pub fn to_svg(scene: &Scene, title: &str) -> String {
                 }
                 let _ = writeln!(out, "<path d=\"{d}\"{}/>", look(style));
             }
-            Item::Text { at, text, size, angle, anchor, italic, halo } => {
-                let anchor = match anchor {
-                    Anchor::Start => "start",
-                    Anchor::Middle => "middle",
-                    Anchor::End => "end",
-                };
-                let turn = if *angle == 0.0 {
-                    String::new()
-                } else {
-                    format!(" transform=\"rotate({} {} {})\"", number(*angle), number(at[0]), number(at[1]))
-                };
-                let slant = if *italic { " font-style=\"italic\"" } else { "" };
-                let body = escape(text);
-                let base = format!(
-                    "x=\"{}\" y=\"{}\" font-size=\"{}\" text-anchor=\"{anchor}\"{slant}{turn}",
-                    number(at[0]),
-                    number(at[1]),
-                    number(*size)
-                );
-                if *halo {
-                    let _ = writeln!(
-                        out,
-                        "<text {base} fill=\"#ffffff\" stroke=\"#ffffff\" stroke-width=\"{}\" stroke-opacity=\"0.85\" stroke-linejoin=\"round\">{body}</text>",
-                        number(0.2 * size)
-                    );
-                }
-                let _ = writeln!(out, "<text {base} fill=\"#1b1f24\">{body}</text>");
-            }
+            Item::Text { at, spans, style } => write_text(&mut out, *at, spans, style),
             Item::Image { at, size, png } => {
                 let data = base64::engine::general_purpose::STANDARD.encode(png);
                 let _ = writeln!(
