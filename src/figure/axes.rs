@@ -6,6 +6,9 @@ use super::scene::{Anchor, Ink, Scene, Span, Style, TextStyle};
 /// Dark ink of axes and text.
 pub const DARK: Ink = Ink::solid(0x1b, 0x1f, 0x24);
 
+/// Margin at the left and right edge of the page, in millimeters.
+pub const MARGIN: f64 = 1.5;
+
 /// Length of ticks in millimeters; longer than the strokes of a wall.
 const TICK: f64 = 1.2;
 
@@ -135,8 +138,8 @@ pub fn room_below(size: f64) -> f64 {
     TICK + TICK_GAP + 2.0 + 2.0 * size
 }
 
-/// Frame, ticks and labels around the plot.
-pub fn draw_axes(scene: &mut Scene, plot: &Plot, unit: &str, size: f64) {
+/// Frame, ticks and labels around the plot; `above`: the label of y stands above the frame, not along it.
+pub fn draw_axes(scene: &mut Scene, plot: &Plot, unit: &str, size: f64, above: bool) {
     let [w, h] = plot.size();
     let [x0, y0] = plot.at;
     let thin = Style::line(DARK, 0.2);
@@ -161,15 +164,11 @@ pub fn draw_axes(scene: &mut Scene, plot: &Plot, unit: &str, size: f64) {
     }
     let label = quantity("y", ticks.power, unit);
     let left = x0 - TICK - TICK_GAP - ticks.widest(size);
-    if plot.label_above(unit, size) {
-        // Two letters above the frame, clear of the uppermost tick label.
-        put_fitting(
-            scene,
-            [left.max(2.0), y0 - 0.9 * size],
-            label,
-            TextStyle::new(size, Anchor::Start),
-            scene.width - left,
-        );
+    if above {
+        // Clear of the uppermost tick label.
+        let x = left.max(MARGIN);
+        let room = scene.width - x - MARGIN;
+        put_fitting(scene, [x, y0 - 0.9 * size], label, TextStyle::new(size, Anchor::Start), room);
     } else {
         scene.text([left - 1.4 - 0.25 * size, y0 + 0.5 * h], label, middle.turned(-90.0));
     }

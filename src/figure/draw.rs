@@ -2,7 +2,7 @@
 
 use ndarray::Array2;
 
-use super::axes::{Plot, draw_axes, room_below, room_left};
+use super::axes::{MARGIN, Plot, draw_axes, room_below, room_left};
 use super::background::{Background, draw_image, gaps_of};
 use super::color_bar::ColorBar;
 use super::color_map::ColorMap;
@@ -22,9 +22,6 @@ const POINT: f64 = 25.4 / 72.0;
 
 /// A figure is about this high at most, in millimeters; the plot shrinks instead.
 const HIGHEST: f64 = 230.0;
-
-/// Margin at the left and right edge, in millimeters.
-const MARGIN: f64 = 1.5;
 
 /// Levels along the lines are this much smaller than other text.
 const LEVEL_SIZE: f64 = 0.86;
@@ -129,7 +126,7 @@ pub fn draw(input: &FigureInput<'_>, options: &FigureOptions) -> Result<Figure, 
     let signed = input.background.as_ref().is_some_and(|b| b.signed);
     let map = options.color_map.unwrap_or(if signed { ColorMap::Vik } else { ColorMap::Cividis });
     let bar = input.background.as_ref().and_then(|b| ColorBar::new(b, map, size));
-    let plot = layout(input, options, size, bar.as_ref())?;
+    let (plot, turned) = layout(input, options, size, bar.as_ref())?;
 
     scene.items.push(Item::Clip { at: plot.at, size: plot.size() });
     draw_image(&mut scene, &plot, input.domain, input.background.as_ref(), input.flags, map)?;
@@ -151,18 +148,19 @@ pub fn draw(input: &FigureInput<'_>, options: &FigureOptions) -> Result<Figure, 
     scene.items.push(Item::EndClip);
     draw_walls(&mut scene, &plot, input.domain);
     draw_labels(&mut scene, &labels, LEVEL_SIZE * size);
-    draw_axes(&mut scene, &plot, &input.units.position(), size);
+    draw_axes(&mut scene, &plot, &input.units.position(), size, turned.label_above);
     for (point, at) in &marks {
         draw_symbol(&mut scene, *at, point.kind, counter_clockwise(point), point.normal.unwrap_or([0.0, 1.0]), radius);
     }
     let [w, h] = plot.size();
-    if let Some(bar) = bar.as_ref().filter(|b| !b.lies(h)) {
+    if let Some(bar) = bar.as_ref().filter(|_| !turned.bar_lies) {
         bar.draw_upright(&mut scene, [plot.at[0] + w, plot.at[1]], h)?;
     }
     let top = plot.at[1] + h + room_below(size);
     // Aligned with a wide plot; a narrow one stands in the middle of the page.
     let left = if plot.at[0] < 0.2 * options.width_mm { plot.at[0] } else { MARGIN };
-    scene.height = draw_below(&mut scene, input, &entries_of(input, dashed), bar.as_ref(), h, [left, top], size)? + 1.0;
+    let lying = bar.as_ref().filter(|_| turned.bar_lies);
+    scene.height = draw_below(&mut scene, input, &entries_of(input, dashed), lying, [left, top], size)? + 1.0;
     let svg = to_svg(&scene, &input.caption);
     Ok(Figure { scene, svg, dpi: options.dpi })
 }
@@ -172,17 +170,25 @@ fn draw_below(
     scene: &mut Scene,
     input: &FigureInput<'_>,
     entries: &[Entry],
-    bar: Option<&ColorBar<'_>>,
-    plot_height: f64,
+    lying: Option<&ColorBar<'_>>,
     [left, top]: [f64; 2],
     size: f64,
 ) -> Result<f64, FigureError> {
     let mut y = top;
-    if let Some(bar) = bar.filter(|b| b.lies(plot_height)) {
+    if let Some(bar) = lying {
         y = bar.draw_lying(scene, left, y)?;
     }
     y = draw_legend(scene, entries, left, y, size);
     Ok(draw_caption(scene, &input.caption, left, y, 0.92 * size))
+}
+
+/// What a plot that is too low for upright labels has elsewhere.
+#[derive(Debug, Clone, Copy, Default)]
+struct Turned {
+    /// The label of the y axis stands above the plot.
+    label_above: bool,
+    /// The color bar lies below the plot.
+    bar_lies: bool,
 }
 
 /// Place and scale of the plot.
@@ -191,7 +197,7 @@ fn layout(
     options: &FigureOptions,
     size: f64,
     bar: Option<&ColorBar<'_>>,
-) -> Result<Plot, FigureError> {
+) -> Result<(Plot, Turned), FigureError> {
     let grid = &input.domain.grid;
     let (mut x, mut y) = ([grid.x.first(), grid.x.last()], [grid.y.first(), grid.y.last()]);
     for side in Side::ALL {
@@ -207,16 +213,20 @@ fn layout(
     let (lx, ly) = (x[1] - x[0], y[1] - y[0]);
     let unit = input.units.position();
     let mut plot = Plot { x, y, at: [0.0, 0.0], scale: options.width_mm / lx };
-    // Labels depend on the size of the plot and the plot on the room the labels leave: a few rounds settle it.
+    // Labels depend on the size of the plot and the plot on the room the labels leave: a few rounds settle it.  What was turned once
+    // stays turned, else the rounds could go to and fro.
+    let mut turned = Turned::default();
     for _ in 0..4 {
         let h = plot.size()[1];
-        let above = plot.label_above(&unit, size);
+        turned.label_above |= plot.label_above(&unit, size);
+        turned.bar_lies |= bar.is_some_and(|b| b.lies(h));
+        let above = turned.label_above;
         let left = MARGIN + room_left(y, h, size, above);
-        let right = MARGIN + bar.filter(|b| !b.lies(h)).map_or(0.6 * size, |b| b.room(h));
+        let right = MARGIN + bar.filter(|_| !turned.bar_lies).map_or(0.6 * size, |b| b.room(h));
         let top = 1.0 + if above { 2.2 * size } else { 0.5 * size };
         let mut probe = Scene { width: options.width_mm, ..Scene::default() };
         let entries = entries_of(input, false);
-        let below = draw_below(&mut probe, input, &entries, bar, h, [left, 0.0], size)?;
+        let below = draw_below(&mut probe, input, &entries, bar.filter(|_| turned.bar_lies), [left, 0.0], size)?;
         let width = (options.width_mm - left - right).max(MARGIN);
         let height = (HIGHEST - top - room_below(size) - below).max(0.25 * HIGHEST);
         plot.scale = (width / lx).min(height / ly);
@@ -225,7 +235,7 @@ fn layout(
     }
     let [w, h] = plot.size();
     if [lx, ly, plot.scale].iter().all(|v| v.is_normal()) && w.is_finite() && h.is_finite() {
-        Ok(plot)
+        Ok((plot, turned))
     } else {
         Err(FigureError::Range { x, y })
     }

@@ -23,6 +23,9 @@ const CLEARANCE: f64 = 0.5;
 /// Dashes of lines through filled gaps, millimeters on and off.
 pub const FILLED_DASH: [f64; 2] = [0.9, 0.7];
 
+/// Filled stretches shorter than this on the page, in millimeters, are drawn through: single vectors left out would only fray the lines.
+const SHORTEST_DASHED: f64 = 3.0;
+
 /// A stretch of a line on the page that was measured throughout, or filled throughout.
 struct Stretch {
     points: Vec<[f64; 2]>,
@@ -59,6 +62,9 @@ fn stretches(plot: &Plot, contour: &Contour) -> Vec<Stretch> {
         open = true;
     }
     out.retain(|s| s.points.len() > 1);
+    for stretch in &mut out {
+        stretch.filled &= length(&stretch.points) > SHORTEST_DASHED;
+    }
     out
 }
 
@@ -261,7 +267,7 @@ pub fn draw_arrows(scene: &mut Scene, plot: &Plot, contours: &[Contour], taken: 
     scene.paths(heads, Style::area(STREAM));
 }
 
-/// Levels drawn as text, with as many decimals as the step between levels needs; a power of ten apart for extreme numbers.
+/// Levels drawn as text, with as many decimals as the step between labelled levels needs; a power of ten apart for extreme numbers.
 fn level_text(value: f64, step: f64) -> String {
     if !value.is_finite() {
         return String::new();
@@ -339,7 +345,7 @@ pub fn place_labels(
     let mut order: Vec<&Contour> = contours.iter().filter(|c| c.role == Role::Level && wanted(c.psi)).collect();
     order.sort_by(|a, b| b.length.total_cmp(&a.length));
     for contour in order {
-        let text = level_text(sign * contour.psi, step);
+        let text = level_text(sign * contour.psi, stride);
         let half = 0.5 * font::width(&font::spans(&text)) * size;
         let line = on_page(plot, contour);
         let total = line.length();
