@@ -187,7 +187,7 @@ fn well_formed(xml: &str) -> Result<(), String> {
         }
         let end = rest[at..].find('>').ok_or("a tag does not end")?;
         let tag = &rest[at + 1..at + end];
-        if tag.matches('"').count() % 2 != 0 {
+        if !tag.matches('"').count().is_multiple_of(2) {
             return Err(format!("quotes in `{tag}`"));
         }
         if let Some(name) = tag.strip_prefix('/') {

@@ -23,6 +23,9 @@ const SHADES: u32 = 128;
 /// Tallest upright bar in millimeters; it stands in the middle of a taller plot.
 const TALLEST: f64 = 100.0;
 
+/// Longest lying bar in millimeters.
+const LONGEST: f64 = 60.0;
+
 /// Shortest lying bar in millimeters.
 const SHORTEST: f64 = 25.0;
 
@@ -125,7 +128,7 @@ impl<'a> ColorBar<'a> {
             let row = top + CAP_HEIGHT * self.size;
             top = put_lines(scene, &text, [left, row], room, self.size).unwrap_or(row) + 0.8 * self.size;
         }
-        let length = (left + room - x).min(60.0).max(5.0);
+        let length = (left + room - x).clamp(5.0, LONGEST);
         self.put_bar(scene, [x, top], [length, THICK], encode(SHADES, 1, &self.shades(false))?);
         let ticks = horizontal_ticks(self.range, length, self.size);
         for &value in &ticks.values {
