@@ -227,10 +227,11 @@ fn psi_zero(text: &str) -> Result<PsiZero, IoError> {
     match text {
         "wall" | "auto" => Ok(PsiZero::Auto),
         "solid" => Ok(PsiZero::Body(0)),
+        "axis" => Ok(PsiZero::Axis),
         _ if text.contains(',') => point(text, "[fit] zero").map(|[x, y]| PsiZero::Point { x, y }),
         _ => Err(IoError::setting(
             "[fit] zero",
-            format!("`{text}`; write mean, bottom, top, left, right, \"body 1\", or a point \"X,Y\""),
+            format!("`{text}`; write mean, bottom, top, left, right, axis, \"body 1\", or a point \"X,Y\""),
         )),
     }
 }

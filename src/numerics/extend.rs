@@ -2,8 +2,8 @@
 
 use ndarray::Array2;
 
-use super::graph::{ON_NODES, wall_distance};
 use super::surface::PsiSurface;
+use super::walls::{ON_NODES, wall_distance};
 use crate::field::{Axis, Domain, Grid, Shape, Side, Surface};
 
 /// A first node nearer to the surface than this share of a step is left out of the extrapolation into the body.
@@ -11,7 +11,8 @@ const TOO_NEAR: f64 = 0.3;
 
 /// Surface of psi that reaches the walls and bodies psi is tied to.
 ///
-/// * A wall off the nodes adds a row or column of nodes on the wall, where psi is the psi of the wall.
+/// * A wall off the nodes adds a row or column of nodes on the wall, where psi is the psi of the wall; so it is at nodes on a wall
+///   that carry no vector.
 /// * Covered nodes next to the fluid get the value that continues psi through the surface: slip, the polynomial through the
 ///   psi of the body on its outline and two fluid nodes; no-slip, `psi_b + a s^2 + b s^3` through two fluid nodes.  What lies inside
 ///   the outline has no meaning of its own and is never reported.
@@ -29,11 +30,14 @@ pub fn extended_surface(domain: &Domain, psi: &Array2<f64>, body_psi: &[f64], wa
     let mut y = domain.grid.y.nodes().to_vec();
     let (mut pad_low, mut pad_high) = ((0, 0), (0, 0));
     for (s, side) in Side::ALL.into_iter().enumerate() {
-        let Some(at) = domain.walls.get(side).and_then(|wall| wall.at) else { continue };
-        let (distance, _) = wall_distance(domain, side, at);
-        if distance <= ON_NODES || !wall_psi[s].is_finite() {
+        let Some(wall) = domain.walls.get(side) else { continue };
+        if !wall_psi[s].is_finite() {
             continue;
         }
+        let Some(at) = wall.at.filter(|&at| wall_distance(domain, side, at).0 > ON_NODES) else {
+            reach_wall_on_nodes(domain, psi, side, wall_psi[s], &mut values);
+            continue;
+        };
         match side {
             Side::Bottom => {
                 pad_low.0 = 1;
@@ -82,6 +86,23 @@ pub fn extended_surface(domain: &Domain, psi: &Array2<f64>, body_psi: &[f64], wa
         }
     });
     PsiSurface::new(&grid, &padded)
+}
+
+/// Gives nodes on a wall that carry no vector the psi of the wall, where the next node has a psi.
+fn reach_wall_on_nodes(domain: &Domain, psi: &Array2<f64>, side: Side, level: f64, values: &mut Array2<f64>) {
+    let (ny, nx) = psi.dim();
+    let along = if matches!(side, Side::Bottom | Side::Top) { nx } else { ny };
+    for k in 0..along {
+        let (node, next) = match side {
+            Side::Bottom => ((0, k), (1, k)),
+            Side::Top => ((ny - 1, k), (ny - 2, k)),
+            Side::Left => ((k, 0), (k, 1)),
+            Side::Right => ((k, nx - 1), (k, nx - 2)),
+        };
+        if values[node].is_nan() && psi[next].is_finite() && !domain.is_solid(node.0, node.1) {
+            values[node] = level;
+        }
+    }
 }
 
 fn continue_into_body(domain: &Domain, psi: &Array2<f64>, body: usize, level: f64, values: &mut Array2<f64>) {

@@ -189,6 +189,7 @@ fn fit(flow: &FittedFlow, check: &Check, context: &ReportContext) -> Value {
 pub fn zero_in_words(flow: &FittedFlow) -> String {
     match flow.fit.zero {
         PsiZero::Auto | PsiZero::Mean => "mean over the field".to_owned(),
+        PsiZero::Axis => "on the axis".to_owned(),
         PsiZero::Wall(side) => format!("on the {} wall", side.name()),
         PsiZero::Body(body) => format!("on body {}", body + 1),
         PsiZero::Point { x, y } => format!("at ({x}, {y})"),
