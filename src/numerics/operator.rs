@@ -27,7 +27,7 @@ pub const CHOLESKY_LIMIT_HARD: usize = 600_000;
 /// this factor (packed axes)...
 pub const HARD_ANISOTROPY: f64 = 6.0;
 
-/// ... or when more than this share of the fluid nodes is missing.
+/// ... or when more than this share of the fluid nodes is missing beside a usable one (scattered gaps, not one large one).
 pub const HARD_SHARE: f64 = 0.15;
 
 /// Residual that a direct solve must reach; above it the answer is not called converged.
@@ -480,7 +480,14 @@ fn is_hard(field: &VelocityField, graph: &Graph) -> bool {
                 continue;
             }
             all += 1;
-            missing += usize::from(!field.valid[[j, i]]);
+            let beside = |jj: usize, ii: usize| field.valid.get([jj, ii]).copied().unwrap_or(false);
+            missing += usize::from(
+                !field.valid[[j, i]]
+                    && (beside(j + 1, i)
+                        || beside(j, i + 1)
+                        || beside(j.wrapping_sub(1), i)
+                        || beside(j, i.wrapping_sub(1))),
+            );
             if j + 1 < ny && i + 1 < nx {
                 let (x, y) = (graph.weight_x[[j, i]], graph.weight_y[[j, i]]);
                 packed += usize::from(x > 0.0 && y > 0.0 && f64::max(x / y, y / x) > HARD_ANISOTROPY);
