@@ -49,7 +49,7 @@ enum Method {
     Cosine,
     Cholesky(Box<Factor>),
     /// With the factorization that takes over where the iteration does not converge, made when first needed.
-    Multigrid(Box<Multigrid>, OnceLock<Option<Factor>>),
+    Multigrid(Box<Multigrid>, OnceLock<Option<Box<Factor>>>),
 }
 
 impl StreamFunctionOperator {
@@ -188,7 +188,7 @@ impl StreamFunctionOperator {
                 b.extend_from_slice(&extra_b);
                 let outcome = grid.solve(&b, self.options.tolerance, self.options.max_iterations);
                 if !outcome.converged
-                    && let Some(factor) = fallback.get_or_init(|| factor(graph, &self.parts))
+                    && let Some(factor) = fallback.get_or_init(|| factor(graph, &self.parts).map(Box::new))
                 {
                     let (psi, extra, relative) = self.solve_directly(factor, &grid_b, &extra_b);
                     return Ok((psi, extra, report(SolverKind::Cholesky, direct_reason(relative), 0, relative)));

@@ -2,7 +2,7 @@
 
 use ndarray::Array2;
 
-pub use super::operator::StreamFunctionOperator;
+pub use super::operator::{CHOLESKY_LIMIT, CHOLESKY_LIMIT_HARD, DIRECT_TOLERANCE, StreamFunctionOperator};
 use super::solver::{SolveReport, SolverKind};
 use crate::field::{Side, VelocityField};
 
