@@ -59,7 +59,7 @@ pub struct Contour {
     pub area: Option<f64>,
     /// Turnover time `oint ds/|u|` of a closed line; `None` for open lines and lines through a stagnation point.
     pub period: Option<f64>,
-    /// The same period from `dA/dpsi`, the cross-check; `None` where the neighbouring levels do not close.
+    /// The same period from `dA/dpsi`, the cross-check; `None` where the neighboring levels do not close.
     pub period_by_area: Option<f64>,
     /// Share of the length that runs through measured cells.
     pub measured_share: f64,

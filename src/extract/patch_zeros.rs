@@ -8,7 +8,7 @@ use crate::numerics::surface::jet_of;
 pub(super) type Patch = [[f64; 4]; 4];
 
 /// How far outside its box a zero may lie and still be taken, in box units; keeps zeros that rounding puts just across a
-/// border (the neighbour finds them too, the copies are merged).
+/// border (the neighbor finds them too, the copies are merged).
 const OUTSIDE_TOLERANCE: f64 = 1e-7;
 /// Newton step (cell units) below which the iteration has converged.
 const NEWTON_STEP: f64 = 1e-12;

@@ -148,7 +148,7 @@ impl Run {
         }
     }
 
-    /// Takes out lobe `k`: its neighbours become one; at an end its one change of sign goes with it.
+    /// Takes out lobe `k`: its neighbors become one; at an end its one change of sign goes with it.
     fn take_out(&mut self, k: usize) {
         let last = self.lobes.len() - 1;
         if k == 0 {

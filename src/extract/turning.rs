@@ -101,7 +101,7 @@ fn turning_of_row(surface: &PsiSurface, resting: &[bool; 4], floor: f64, j: usiz
 /// Bezier points of the velocity, scaled to a change of psi per cell, along one edge of a cell, counter-clockwise.
 fn edge_velocity(b: &[[f64; 4]; 4], side: Side, dx: f64, dy: f64) -> [[f64; 2]; 4] {
     let size = (dx * dy).sqrt();
-    // Value of psi on the edge and its neighbours one Bezier row inward: along the edge and across it.
+    // Value of psi on the edge and its neighbors one Bezier row inward: along the edge and across it.
     let line = |k: usize| match side {
         Side::Bottom => (b[0][k], b[1][k]),
         Side::Top => (b[3][k], b[2][k]),

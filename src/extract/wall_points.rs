@@ -16,7 +16,7 @@ use crate::numerics::surface::PsiSurface;
 pub struct WallPointOptions {
     /// Samples of the wall strength per node spacing along the wall.
     pub samples: usize,
-    /// Distance in node spacings below which two neighbouring points, necessarily of opposite kind, cancel: a pair that close
+    /// Distance in node spacings below which two neighboring points, necessarily of opposite kind, cancel: a pair that close
     /// is made by noise or by the extrapolation to the wall.
     pub merge_distance: f64,
     /// Distance in node spacings of notes, as for interior points.
@@ -27,7 +27,7 @@ pub struct WallPointOptions {
     /// noise sigma of the vectors gives 0.45 (side) to 0.65 (body) sigma h without smoothing.
     pub psi_noise: f64,
     /// A stretch of wall along which the flow goes one way is taken for real when psi somewhere above it, up to three spacings
-    /// off, differs from psi on the wall by this many standard uncertainties; weaker stretches join their neighbours.
+    /// off, differs from psi on the wall by this many standard uncertainties; weaker stretches join their neighbors.
     pub lobe_sigmas: f64,
 }
 

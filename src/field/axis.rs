@@ -18,7 +18,7 @@ pub enum AxisError {
         /// Its value.
         value: f64,
     },
-    /// Two neighbours do not increase.
+    /// Two neighbors do not increase.
     #[error("axis positions must increase: node {index} at {value} follows {previous}")]
     NotIncreasing {
         /// Index of the second of the two nodes.

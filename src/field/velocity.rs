@@ -139,7 +139,7 @@ pub struct VelocityField {
     pub valid: Array2<bool>,
     /// Standard uncertainty of the components.
     pub sigma: Sigma,
-    /// Share by which neighbouring measurement windows overlap, in `[0, 1)`; `None`: not declared.
+    /// Share by which neighboring measurement windows overlap, in `[0, 1)`; `None`: not declared.
     pub overlap: Option<f64>,
     /// Which frame this is.
     pub frame: Frame,

@@ -64,7 +64,7 @@ impl Default for FitOptions {
 #[derive(Debug, Clone, PartialEq, thiserror::Error)]
 #[non_exhaustive]
 pub enum FitError {
-    /// No two neighbouring nodes carry a vector.
+    /// No two neighboring nodes carry a vector.
     #[error(
         "no two neighboring nodes carry a usable vector ({valid} usable vectors in all): there is nothing to integrate along"
     )]

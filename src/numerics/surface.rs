@@ -143,7 +143,7 @@ impl PsiSurface {
     }
 
     /// Valid cell that holds the point, with local coordinates `(j, i, s, t)`; a point on a shared edge or node is given to
-    /// any valid neighbour; `None` outside the valid cells.
+    /// any valid neighbor; `None` outside the valid cells.
     pub fn locate(&self, x: f64, y: f64) -> Option<(usize, usize, f64, f64)> {
         let (i, t) = self.grid.x.locate(x)?;
         let (j, s) = self.grid.y.locate(y)?;
@@ -250,7 +250,7 @@ pub fn spline_slopes(x: &[f64], f: &[f64]) -> Vec<f64> {
     upper[0] = h0 + h1;
     d[0] = ((h0 + 2.0 * (h0 + h1)) * h1 * slope(0) + h0 * h0 * slope(1)) / (h0 + h1);
     for i in 1..n {
-        let (lower, centre, above, right) = if i + 1 < n {
+        let (lower, center, above, right) = if i + 1 < n {
             let (a, b) = (h(i - 1), h(i));
             (b, 2.0 * (a + b), a, 3.0 * (b * slope(i - 1) + a * slope(i)))
         } else {
@@ -259,7 +259,7 @@ pub fn spline_slopes(x: &[f64], f: &[f64]) -> Vec<f64> {
             (a + b, b, 0.0, right)
         };
         let factor = lower / diagonal[i - 1];
-        diagonal[i] = centre - factor * upper[i - 1];
+        diagonal[i] = center - factor * upper[i - 1];
         upper[i] = above;
         d[i] = right - factor * d[i - 1];
     }
