@@ -4,7 +4,7 @@ use std::path::Path;
 
 use isopsi::field::{Axis, Side, Sigma, Thickness};
 use isopsi::io::output::write_whole;
-use isopsi::io::{Dataset, read};
+use isopsi::io::{Dataset, commented_survey, read};
 use serde_json::{Value, json};
 
 use super::args::Common;
@@ -26,7 +26,7 @@ pub fn inspect(common: &Common, write: Option<&Path>) -> Result<(), Failure> {
             )
             .into());
         }
-        let text = survey_text(&data, path);
+        let text = commented_survey(&data, path);
         write_whole(path, |w| w.write_all(text.as_bytes()))?;
         Messages::new(common.quiet).line(&format!("wrote {}", path.display()));
     }
@@ -148,94 +148,4 @@ fn text(data: &Dataset) -> String {
         }
     }
     out
-}
-
-/// A commented survey file holding what was found; what is not known stands as a comment.
-fn survey_text(data: &Dataset, at: &Path) -> String {
-    let quote = |s: &str| toml::Value::String(s.to_owned()).to_string();
-    let files: Vec<String> = data.sources.iter().map(|s| relative(&s.path, at)).collect();
-    let known = |key: &str, value: Option<String>, example: &str, why: &str| match value {
-        Some(value) => format!("{key} = {:28} # {why}\n", value),
-        None => format!("# {key} = {example:26} # {why}\n"),
-    };
-    let mut out = String::from(
-        "# Survey file: what was measured, and how well. Lines that begin with # are not in force.\n\n[data]\n",
-    );
-    out += &format!("files = {}\n", files.first().map_or_else(|| "\"\"".to_owned(), |f| quote(f)));
-    if data.frames > 1 {
-        out += &format!("frames = \"{}\" # of {} frames, counted from 0\n", data.field.frame.index, data.frames);
-    }
-    let s = &data.survey;
-    if let Some(columns) = &s.data.columns {
-        out += &format!("columns = {}\n", quote(&columns.list(true).join(",")));
-    }
-    if let Some(order) = &s.data.order {
-        out += &format!("order = {}\n", quote(order));
-    }
-    if let Some(arrays) = &s.data.arrays {
-        let list: Vec<String> = arrays.iter().map(|(role, path)| format!("{role} = {}", quote(path))).collect();
-        out += &format!("arrays = {{ {} }}\n", list.join(", "));
-    }
-    out +=
-        &known("zero", s.data.zero.as_deref().map(quote), "\"gap\"", "vectors of exactly (0, 0): \"value\" or \"gap\"");
-    out += "\n[geometry]\n";
-    out += &format!(
-        "# found: x {} to {}, y {} to {}, {} by {} nodes\n",
-        short(data.field.grid().x.first()),
-        short(data.field.grid().x.last()),
-        short(data.field.grid().y.first()),
-        short(data.field.grid().y.last()),
-        data.field.grid().nx(),
-        data.field.grid().ny()
-    );
-    out += &known(
-        "y",
-        s.geometry.y.as_deref().map(quote),
-        "\"down\"",
-        "\"down\" when y and v count downwards, as in images",
-    );
-    out +=
-        &known("scale", s.geometry.scale.as_deref().map(quote), "\"0.05 mm\"", "length of a pixel, for data in pixels");
-    out += &known("interval", s.geometry.interval.as_deref().map(quote), "\"2 ms\"", "time between the two exposures");
-    out += "\n[units]\n";
-    let unit = |declared: &Option<String>, found: &Option<String>| {
-        declared.clone().or_else(|| found.clone()).map(|u| quote(&u))
-    };
-    out += &known("length", unit(&s.units.length, &data.file_units.0), "\"mm\"", "unit of the coordinates in the data");
-    out += &known(
-        "velocity",
-        unit(&s.units.velocity, &data.file_units.1),
-        "\"mm/s\"",
-        "unit of the velocities in the data",
-    );
-    out += "\n[noise]\n";
-    let sigma = s.noise.sigma.as_ref().map(|v| quote(&v.to_string()));
-    out += &known("sigma", sigma, "\"0.4 mm/s\"", "standard uncertainty (k = 1) of u and of v");
-    let overlap = s.noise.overlap.as_ref().map(ToString::to_string);
-    out += &known("overlap", overlap, "0.5", "share by which neighboring windows overlap");
-    out += "\n# [[solid]]                      # a body; as often as needed\n# circle = { x = 0.0, y = 0.0, radius = 1.0 }\n# surface = \"no-slip\"            # slip, no-slip or free\n";
-    out += "\n[walls]                         # impermeable sides\n";
-    for (side, value) in
-        [("bottom", &s.walls.bottom), ("top", &s.walls.top), ("left", &s.walls.left), ("right", &s.walls.right)]
-    {
-        out += &known(
-            side,
-            value.as_deref().map(quote),
-            "\"no-slip at 0.0\"",
-            "slip or no-slip; at: position, when off the outermost vectors",
-        );
-    }
-    out
-}
-
-/// Path of a data file as seen from the survey file.
-fn relative(file: &Path, survey: &Path) -> String {
-    let folder = survey.parent().filter(|p| !p.as_os_str().is_empty()).unwrap_or(Path::new("."));
-    if let (Ok(file), Ok(folder)) = (file.canonicalize(), folder.canonicalize()) {
-        return match file.strip_prefix(&folder) {
-            Ok(inside) => inside.display().to_string(),
-            Err(_) => file.display().to_string(),
-        };
-    }
-    file.display().to_string()
 }

@@ -25,6 +25,9 @@ const MESH_TOLERANCE: f64 = 1e-3;
 /// (one half, and a little for the slope being fitted).
 const PRINTED_TOLERANCE: f64 = 0.6;
 
+/// Rounding of coordinates is mentioned when it is more than this share of a step.
+const WORTH_SAYING: f64 = 1e-4;
+
 /// Builds the field, its units and the remarks.
 ///
 /// # Errors
@@ -47,6 +50,7 @@ pub fn assemble(
         ));
     }
     refuse_infinite(&raw, path)?;
+    refuse_other_shapes(&raw, path)?;
     let masks = geometry::masks(survey, shape)?;
     let mut layers = Layers { depth: raw.depth.take(), masks, ..Layers::default() };
     if let Some(file) = &survey.depth.thickness
@@ -58,7 +62,18 @@ pub fn assemble(
     layers.v = std::mem::take(&mut raw.v);
     layers.valid = raw.valid.take();
     layers.solid = raw.solid.take();
-    layers.sigma = raw.sigma_u.take().zip(raw.sigma_v.take());
+    layers.sigma = match (raw.sigma_u.take(), raw.sigma_v.take()) {
+        (Some(u), Some(v)) => Some((u, v)),
+        (None, None) => None,
+        (u, _) => {
+            let (there, absent) = if u.is_some() { ("sigma_u", "sigma_v") } else { ("sigma_v", "sigma_u") };
+            remarks.push(Remark::new(
+                RemarkKind::Ignored,
+                format!("the file holds {there} but no {absent}; it was left alone"),
+            ));
+            None
+        }
+    };
 
     let down = match survey.geometry.y.as_deref() {
         None | Some("up") => false,
@@ -101,8 +116,11 @@ pub fn assemble(
 
     layers.u *= scales.velocity_factor;
     layers.v *= scales.velocity_factor;
-    mark_gaps(&mut layers, survey, path, &mut remarks)?;
+    let zero_is_gap = mark_gaps(&mut layers, survey)?;
     let domain = domain(grid, &mut layers, survey, &scales, path)?;
+    if !zero_is_gap {
+        point_out_zeros(&layers, &domain, &mut remarks);
+    }
     let valid = layers.valid.clone();
     let mut field = VelocityField::new(Arc::new(domain), layers.u, layers.v)
         .map_err(|e| IoError::content(path, "arrays u, v", e.to_string()))?;
@@ -178,6 +196,23 @@ fn refuse_infinite(raw: &RawFrame, path: &Path) -> Result<(), IoError> {
     Ok(())
 }
 
+fn refuse_other_shapes(raw: &RawFrame, path: &Path) -> Result<(), IoError> {
+    let shape = raw.u.dim();
+    let others = [
+        ("sigma_u", raw.sigma_u.as_ref().map(Array2::dim)),
+        ("sigma_v", raw.sigma_v.as_ref().map(Array2::dim)),
+        ("valid", raw.valid.as_ref().map(Array2::dim)),
+        ("solid", raw.solid.as_ref().map(Array2::dim)),
+        ("depth", raw.depth.as_ref().map(Array2::dim)),
+    ];
+    for (name, other) in others {
+        if let Some(other) = other.filter(|other| *other != shape) {
+            return Err(IoError::content(path, format!("array {name}"), format!("shape {other:?}; u has {shape:?}")));
+        }
+    }
+    Ok(())
+}
+
 /// Origin and spacing from the settings, as `[x, y]`.
 fn placing(survey: &Survey) -> Result<[[Option<f64>; 2]; 2], IoError> {
     let origin = survey.geometry.origin.map_or([None; 2], |o| o.map(Some));
@@ -215,7 +250,18 @@ fn axis_positions(
                 format!("the file holds no {name} coordinates; node numbers are used, `--spacing` and `--origin` set real ones"),
             ));
         }
-        return Ok((0..n).map(|k| start + step * k as f64).collect());
+        // A file whose coordinates run down keeps doing so; the origin is the smallest position.
+        let down = match raw {
+            Some(RawAxis::Line(line)) => line.last() < line.first(),
+            Some(RawAxis::Mesh(mesh)) => {
+                mesh.last() < mesh.first() && mesh.index_axis(Dim(1 - dim), 0).len() == n && {
+                    let lane = mesh.index_axis(Dim(1 - dim), 0);
+                    lane.last() < lane.first()
+                }
+            }
+            None => false,
+        };
+        return Ok((0..n).map(|k| start + step * if down { n - 1 - k } else { k } as f64).collect());
     }
     let mut line = match raw {
         Some(RawAxis::Line(line)) => line.clone(),
@@ -237,7 +283,7 @@ fn axis_positions(
         ));
     }
     if let Some(origin) = origin {
-        let shift = origin - line[0];
+        let shift = origin - line[0].min(line[n - 1]);
         line.iter_mut().for_each(|p| *p += shift);
     }
     if let Some(q) = resolution {
@@ -295,39 +341,37 @@ fn straighten(line: &mut [f64], q: f64, name: &str, remarks: &mut Vec<Remark>) {
         for (k, p) in line.iter_mut().enumerate() {
             *p = center + slope * (k as f64 - mean);
         }
-        remarks.push(Remark::new(
-            RemarkKind::RoundedCoordinates,
-            format!("{name} is printed to {q} and uniform within that; taken as {n} nodes {:.6} apart", slope.abs()),
-        ));
+        if q > WORTH_SAYING * slope.abs() {
+            remarks.push(Remark::new(
+                RemarkKind::RoundedCoordinates,
+                format!(
+                    "{name} is printed to {q} and uniform within that; taken as {n} nodes {:.6} apart",
+                    slope.abs()
+                ),
+            ));
+        }
     }
 }
 
-/// Turns `valid`, (0, 0) marks and NaN into gaps, points out patches of (0, 0).
-fn mark_gaps(layers: &mut Layers, survey: &Survey, path: &Path, remarks: &mut Vec<Remark>) -> Result<(), IoError> {
-    let zero_is_gap = match survey.data.zero.as_deref() {
-        None | Some("value") => false,
-        Some("gap") => true,
+/// Turns (0, 0) marks into gaps when the settings say so, which it returns.
+fn mark_gaps(layers: &mut Layers, survey: &Survey) -> Result<bool, IoError> {
+    match survey.data.zero.as_deref() {
+        None | Some("value") => return Ok(false),
+        Some("gap") => {}
         Some(other) => return Err(IoError::setting("[data] zero", format!("`{other}`; write value or gap"))),
-    };
-    if let Some(valid) = &layers.valid
-        && valid.dim() != layers.u.dim()
-    {
-        return Err(IoError::content(
-            path,
-            "array valid",
-            format!("shape {:?}; u has {:?}", valid.dim(), layers.u.dim()),
-        ));
     }
-    let zero = Array2::from_shape_fn(layers.u.dim(), |at| layers.u[at] == 0.0 && layers.v[at] == 0.0);
-    if zero_is_gap {
-        for (at, &is_zero) in zero.indexed_iter() {
-            if is_zero {
-                layers.u[at] = f64::NAN;
-                layers.v[at] = f64::NAN;
-            }
+    for (u, v) in layers.u.iter_mut().zip(layers.v.iter_mut()) {
+        if *u == 0.0 && *v == 0.0 {
+            (*u, *v) = (f64::NAN, f64::NAN);
         }
-        return Ok(());
     }
+    Ok(true)
+}
+
+/// Points out patches of exactly (0, 0) in the fluid.
+fn point_out_zeros(layers: &Layers, domain: &Domain, remarks: &mut Vec<Remark>) {
+    let usable = |at| layers.valid.as_ref().is_none_or(|valid| valid[at]) && domain.covered[at] == 0;
+    let zero = Array2::from_shape_fn(layers.u.dim(), |at| layers.u[at] == 0.0 && layers.v[at] == 0.0 && usable(at));
     let largest = largest_patch(&zero);
     if largest >= ZERO_PATCH {
         let total = zero.iter().filter(|z| **z).count();
@@ -338,7 +382,6 @@ fn mark_gaps(layers: &mut Layers, survey: &Survey, path: &Path, remarks: &mut Ve
             ),
         ));
     }
-    Ok(())
 }
 
 /// Size of the largest 4-connected patch that is more than one node thick (a wall row at rest is no patch).
@@ -376,12 +419,12 @@ fn domain(grid: Grid, layers: &mut Layers, survey: &Survey, scales: &Scales, pat
     for (number, (table, mask)) in survey.solid.iter().zip(masks).enumerate() {
         let place = format!("[[solid]] {}", number + 1);
         let body = geometry::body(table, &place, scales.output_factor)?;
-        let before = domain.covered.iter().filter(|c| **c != 0).count();
-        match mask {
-            None => domain = domain.with_body(body),
-            Some(mask) => add_nodes(&mut domain, body, &mask),
-        }
-        if domain.covered.iter().filter(|c| **c != 0).count() == before {
+        let mask = mask.unwrap_or_else(|| {
+            let grid = &domain.grid;
+            Array2::from_shape_fn(shape, |(j, i)| body.shape.contains(grid.x.at(i), grid.y.at(j)))
+        });
+        refuse_overlap(&domain, &body, &mask, &place)?;
+        if !add_nodes(&mut domain, body, &mask) {
             return Err(IoError::setting(
                 place,
                 format!(
@@ -395,9 +438,6 @@ fn domain(grid: Grid, layers: &mut Layers, survey: &Survey, scales: &Scales, pat
         }
     }
     if let Some(solid) = &layers.solid {
-        if solid.dim() != shape {
-            return Err(IoError::content(path, "array solid", format!("shape {:?}; u has {shape:?}", solid.dim())));
-        }
         let mut labels: Vec<u16> = solid.iter().copied().filter(|l| *l > 0).collect();
         labels.sort_unstable();
         labels.dedup();
@@ -437,13 +477,43 @@ fn domain(grid: Grid, layers: &mut Layers, survey: &Survey, scales: &Scales, pat
     Ok(domain)
 }
 
-fn add_nodes(domain: &mut Domain, body: Body, mask: &Array2<bool>) {
-    domain.bodies.push(body);
-    let label = domain.bodies.len() as u16;
+/// Adds a body on the nodes of a mask that no earlier body covers; `false` when there is none.
+fn add_nodes(domain: &mut Domain, body: Body, mask: &Array2<bool>) -> bool {
+    let label = domain.bodies.len() as u16 + 1;
+    let mut any = false;
     for (at, covered) in domain.covered.indexed_iter_mut() {
         if mask[at] && *covered == 0 {
             *covered = label;
+            any = true;
         }
+    }
+    if any {
+        domain.bodies.push(body);
+    }
+    any
+}
+
+/// Two bodies that tie the flow to themselves cannot share nodes; a hole without a tie (a shadow) may overlap anything.
+fn refuse_overlap(domain: &Domain, body: &Body, mask: &Array2<bool>, place: &str) -> Result<(), IoError> {
+    if body.surface == Surface::Free {
+        return Ok(());
+    }
+    let tied = |label: u16| {
+        let number = usize::from(label).checked_sub(1)?;
+        domain.bodies.get(number).filter(|b| b.surface != Surface::Free).map(|_| number + 1)
+    };
+    let shared =
+        mask.indexed_iter().filter(|(_, inside)| **inside).find_map(|(at, _)| Some((at, tied(domain.covered[at])?)));
+    match shared {
+        None => Ok(()),
+        Some(((j, i), number)) => Err(IoError::setting(
+            place,
+            format!(
+                "overlaps body {number} at ({}, {}); draw touching bodies as one polygon or mask",
+                domain.grid.x.at(i),
+                domain.grid.y.at(j)
+            ),
+        )),
     }
 }
 

@@ -16,6 +16,7 @@ pub mod raw;
 mod read;
 pub mod request;
 pub mod survey;
+mod survey_text;
 pub mod table;
 mod text;
 
@@ -23,3 +24,4 @@ pub use error::{Blame, IoError};
 pub use inputs::{FrameRange, natural};
 pub use read::{Dataset, Source, read};
 pub use survey::Survey;
+pub use survey_text::commented_survey;

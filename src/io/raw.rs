@@ -4,6 +4,9 @@ use ndarray::Array2;
 
 use crate::field::Remark;
 
+/// Largest number of nodes of one frame; more would not fit an ordinary machine.
+pub const NODE_LIMIT: usize = 1 << 27;
+
 /// Coordinates of one axis as stored.
 #[derive(Debug, Clone, PartialEq)]
 pub enum RawAxis {
@@ -27,7 +30,7 @@ pub struct RawFrame {
     pub x: Option<RawAxis>,
     /// y coordinates, if the file holds them.
     pub y: Option<RawAxis>,
-    /// Printed resolution of the x coordinates (for example 1 when printed as 4, 9, 13); `None` for binary values.
+    /// Printed resolution of the x coordinates (for example 1 when printed as 4, 9, 13), or that of f16 and f32 numbers; `None`: exact.
     pub x_resolution: Option<f64>,
     /// Printed resolution of the y coordinates.
     pub y_resolution: Option<f64>,

@@ -35,6 +35,8 @@ pub struct Dataset {
     pub units: UnitSystem,
     /// Files read.
     pub sources: Vec<Source>,
+    /// All files of the input, in the order of frames.
+    pub files: Vec<PathBuf>,
     /// Frames available over all inputs.
     pub frames: usize,
     /// Settings in force: flags over survey file.
@@ -126,7 +128,8 @@ pub fn read(inputs: &[PathBuf], flags: &Survey) -> Result<Dataset, IoError> {
     let format = raw.format.clone();
     let file_units = (raw.units.length.clone(), raw.units.velocity.clone());
     let (field, units, remarks) = assemble(raw, &survey, path)?;
-    Ok(Dataset { field, units, sources: vec![source(path)?], frames, survey, format, found, file_units, remarks })
+    let sources = vec![source(path)?];
+    Ok(Dataset { field, units, sources, files, frames, survey, format, found, file_units, remarks })
 }
 
 /// Reads a file by its content; the extension only speaks when the content is plain text.

@@ -10,7 +10,7 @@ use super::error::IoError;
 
 /// One string or several.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
-#[serde(untagged)]
+#[serde(untagged, expecting = "expected a text in quotes or a list of texts")]
 pub enum OneOrMany {
     /// One.
     One(String),
@@ -31,7 +31,7 @@ impl OneOrMany {
 
 /// A number, or a string such as "auto" or a number with a unit.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
-#[serde(untagged)]
+#[serde(untagged, expecting = "expected a number or a text in quotes")]
 pub enum NumberOrText {
     /// A bare number.
     Number(f64),
@@ -50,7 +50,7 @@ impl std::fmt::Display for NumberOrText {
 
 /// One number or a pair.
 #[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
-#[serde(untagged)]
+#[serde(untagged, expecting = "expected a number or a pair of numbers, [dx, dy]")]
 pub enum OneOrTwo {
     /// The same for x and y.
     One(f64),
@@ -282,8 +282,8 @@ impl Survey {
         let text = String::from_utf8(bytes)
             .map_err(|_| IoError::setting(path.display().to_string(), "a survey file must be UTF-8 text"))?;
         let mut survey: Survey = toml::from_str(&text).map_err(|e| {
-            let line = e.span().map_or(1, |span| text[..span.start.min(text.len())].matches('\n').count() + 1);
-            IoError::setting(format!("{}: line {line}", path.display()), explain(e.message()))
+            let start = e.span().map_or(0, |span| span.start);
+            IoError::setting(format!("{}: {}", path.display(), place(&text, start)), explain(e.message()))
         })?;
         let folder = path.parent().unwrap_or(Path::new(""));
         let anchor = |name: &mut String| *name = folder.join(&*name).to_string_lossy().into_owned();
@@ -294,7 +294,7 @@ impl Survey {
         }
         survey.solid.iter_mut().filter_map(|s| s.mask.as_mut()).for_each(anchor);
         if let Some(thickness) = &mut survey.depth.thickness
-            && !matches!(thickness.as_str(), "uniform" | "radius")
+            && !matches!(thickness.as_str(), "uniform" | "radius" | "file")
         {
             anchor(thickness);
         }
@@ -323,6 +323,25 @@ impl Survey {
     }
 }
 
+/// Line, table and key at a byte of a survey file.
+fn place(text: &str, byte: usize) -> String {
+    let before = text.get(..byte).unwrap_or(text);
+    let number = before.matches('\n').count();
+    let mut place = format!("line {}", number + 1);
+    let is_table = |line: &&str| line.trim_start().starts_with('[') && line.trim_end().ends_with(']');
+    let line = text.lines().nth(number).unwrap_or_default();
+    if is_table(&line) {
+        return place;
+    }
+    if let Some(table) = text.lines().take(number).filter(is_table).last() {
+        place += &format!(", {}", table.trim());
+    }
+    if let Some((key, _)) = line.split_once('=') {
+        place += &format!(" {}", key.trim());
+    }
+    place
+}
+
 /// Turns a message about an unknown key into one that names the nearest known key.
 fn explain(message: &str) -> String {
     let mut quoted = message.split('`').skip(1).step_by(2);
@@ -337,7 +356,23 @@ fn explain(message: &str) -> String {
             );
         }
     }
-    message.replace('\n', " ").trim().to_owned()
+    // Words of the language instead of those of the program.
+    [
+        ("a boolean", "true or false"),
+        ("boolean", "true or false"),
+        ("usize", "a whole number from 0"),
+        ("u64", "a whole number from 0"),
+    ]
+    .into_iter()
+    .chain([("f64", "a number"), ("a string", "a text in quotes"), ("string", "text")])
+    .fold(message.replace('\n', " "), |text, (from, to)| match text.split_once("expected ") {
+        Some((found, expected)) if expected.starts_with(from) => {
+            format!("{found}expected {to}{}", &expected[from.len()..])
+        }
+        _ => text,
+    })
+    .trim()
+    .to_owned()
 }
 
 /// The candidate most like a word.
@@ -355,7 +390,30 @@ mod tests {
         let path = folder.path().join("s.toml");
         fs::write(&path, "[noise]\nsigma = \"0.4 mm/s\"\noverlapp = 0.5\n").unwrap();
         let text = Survey::read(&path).unwrap_err().to_string();
-        assert!(text.contains("line 3") && text.contains("`overlapp`") && text.contains("`overlap`"), "{text}");
+        assert!(
+            text.contains("line 3, [noise]") && text.contains("`overlapp`") && text.contains("`overlap`"),
+            "{text}"
+        );
+    }
+
+    #[test]
+    fn a_wrong_type_is_named_with_table_key_and_what_was_expected() {
+        let folder = tempfile::tempdir().unwrap();
+        let path = folder.path().join("s.toml");
+        for (content, parts) in [
+            ("[geometry]\nspacing = \"wide\"\n", ["line 2, [geometry] spacing", "a pair of numbers"]),
+            ("[noise]\nsigma = true\n", ["line 2, [noise] sigma", "a number or a text in quotes"]),
+            ("[screen]\npasses = -1\n", ["line 2, [screen] passes", "a whole number from 0"]),
+            ("[screen]\nlimit = \"2\"\n", ["line 2, [screen] limit", "expected a number"]),
+            ("[units]\nlength = 3\n", ["line 2, [units] length", "a text in quotes"]),
+            ("[figure]\nlabels = 3\n", ["line 2, [figure] labels", "true or false"]),
+            ("[[solid]]\n\ncircle = { x = 1, y = 2 }\n", ["line 3, [[solid]] circle", "radius"]),
+            ("[noise]\nsigma = 1\nsigma = 2\n", ["line 3, [noise] sigma", "duplicate"]),
+        ] {
+            fs::write(&path, content).unwrap();
+            let text = Survey::read(&path).unwrap_err().to_string();
+            assert!(parts.iter().all(|p| text.contains(p)), "{content}: {text}");
+        }
     }
 
     #[test]
