@@ -95,7 +95,7 @@ fn decode(path: &Path, bytes: Vec<u8>) -> Result<String, IoError> {
         }
     };
     // Files of old Macintosh programs end lines by a carriage return alone.
-    Ok(if text.contains('\r') && !text.contains('\n') { text.replace('\r', "\n") } else { text })
+    Ok(if !text.contains('\n') && text.contains('\r') { text.replace('\r', "\n") } else { text })
 }
 
 /// Keeps the rows of the wanted frame when a column of times says that the table holds several; frames and the time.
