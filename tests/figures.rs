@@ -235,6 +235,14 @@ fn texts_never_overlap_and_stay_on_the_page_whatever_the_domain() {
     }
 }
 
+/// Place of a text along a line.
+fn halo_text(item: &Item) -> Option<[f64; 2]> {
+    match item {
+        Item::Text { at, style, .. } if style.halo => Some(*at),
+        _ => None,
+    }
+}
+
 #[test]
 fn labels_keep_off_the_marks_of_points_and_off_bodies() {
     let subject = bump();
@@ -247,7 +255,18 @@ fn labels_keep_off_the_marks_of_points_and_off_bodies() {
     let place = |x: f64, y: f64| [at[0] + (x + 2.5) / 8.5 * size[0], at[1] + (3.2 - y) / 3.2 * size[1]];
     // Aspect 1:1, y up.
     approx::assert_abs_diff_eq!(size[0] / 8.5, size[1] / 3.2, epsilon = 1e-9);
-    for point in &subject.points {
+    // A point put where a label stood drives the label away.
+    let labels: Vec<[f64; 2]> = figure.scene.items.iter().filter_map(halo_text).collect();
+    assert!(labels.len() >= 4, "{labels:?}");
+    let mut crowded = bump();
+    for at_label in labels {
+        let [x, y] = [at_label[0] - at[0], at_label[1] - at[1]];
+        let (x, y) = (-2.5 + x / size[0] * 8.5, 3.2 - y / size[1] * 3.2);
+        crowded.points.push(StagnationPoint { x, y, kind: StagnationKind::Saddle, ..crowded.points[0].clone() });
+    }
+    let figure = crowded.draw();
+    assert!(figure.scene.items.iter().filter_map(halo_text).count() >= 4, "labels find other places");
+    for point in &crowded.points {
         let mark = TextBox::level(place(point.x, point.y), [1.0, 1.0]);
         assert!(!figure.scene.boxes.iter().any(|b| b.overlaps(&mark)), "{point:?}");
     }
@@ -369,9 +388,15 @@ fn vertices_and_points_that_are_not_finite_are_left_out() {
         measured_share: 0.0,
         from_point: None,
     });
-    let svg = subject.draw().svg().to_owned();
-    well_formed(&svg).expect("well-formed");
-    assert!(numbers_are_finite(&svg));
+    let figure = subject.draw();
+    well_formed(figure.svg()).expect("well-formed");
+    assert!(numbers_are_finite(figure.svg()));
+    // The writer would put 0 for them: none may reach it.
+    for item in &figure.scene.items {
+        if let Item::Path { pieces, .. } = item {
+            assert!(pieces.iter().flat_map(|(line, _)| line).flatten().all(|t| t.is_finite()));
+        }
+    }
 }
 
 /// Gray values of a binary PPM or of a PNG turned into one.

@@ -48,14 +48,10 @@ fn stretches(plot: &Plot, contour: &Contour) -> Vec<Stretch> {
         match out.last_mut() {
             Some(last) if open && last.filled == filled => last.points.push(p),
             Some(last) if open => {
-                // The segment between a measured and a filled vertex counts as filled.
-                let before = last.points.last().copied();
-                if filled {
-                    out.push(Stretch { points: before.into_iter().chain([p]).collect(), filled });
-                } else {
-                    last.points.push(p);
-                    out.push(Stretch { points: vec![p], filled });
-                }
+                // Vertices can be far apart on straight lines: the change lies somewhere between, drawn midway.
+                let middle = last.points.last().map(|q| [0.5 * (q[0] + p[0]), 0.5 * (q[1] + p[1])]);
+                last.points.extend(middle);
+                out.push(Stretch { points: middle.into_iter().chain([p]).collect(), filled });
             }
             _ => out.push(Stretch { points: vec![p], filled }),
         }
