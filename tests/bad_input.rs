@@ -1,5 +1,7 @@
 //! Everything that can be wrong with an input: the exit code, and a message that says what is wrong, where, and what to do.
 
+#![allow(clippy::unwrap_used)] // a test may fail by panicking
+
 use std::fs;
 use std::path::{Path, PathBuf};
 use std::process::Command;

@@ -634,7 +634,7 @@ fn coordinates_in_single_precision_are_uniform() {
     let data = folder.read("f.npz", zip_of(&arrays, zip::CompressionMethod::Stored), &Survey::default()).unwrap();
     assert!(data.field.grid().x.is_uniform() && data.field.grid().y.is_uniform());
     let text = (0..n * n).fold(String::from("x,y,u,v\n"), |t, k| {
-        let p = |k: usize| f64::from((1000.0 + 0.1 * k as f64 + if k % 7 == 0 { 6e-5 } else { 0.0 }) as f32);
+        let p = |k: usize| f64::from((1000.0 + 0.1 * k as f64 + if k.is_multiple_of(7) { 6e-5 } else { 0.0 }) as f32);
         t + &format!("{},{},1,1\n", p(k % n), p(k / n))
     });
     let data = folder.read("f.csv", text, &Survey::default()).unwrap();
