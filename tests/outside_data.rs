@@ -1,5 +1,6 @@
 //! Measured and simulated fields of other people.  They are not in this repository; the folder that holds them (as `data/`) is
 //! named by the variable ISOPSI_OUTSIDE_DATA, and without it these tests fail.
+#![allow(clippy::unwrap_used, clippy::panic)]
 
 use std::path::PathBuf;
 use std::sync::Arc;
@@ -62,7 +63,7 @@ fn rotational_wind_gives_the_reference_psi() {
         let mut survey = Survey::default();
         let pairs = [("u", u), ("v", v), ("x", "lon"), ("y", "lat")];
         survey.data.arrays = Some(pairs.into_iter().map(|(a, b)| (a.to_owned(), b.to_owned())).collect());
-        read(&[path.clone()], &survey).unwrap().field
+        read(std::slice::from_ref(&path), &survey).unwrap().field
     };
     let (wind, reference) = (arrays("upsi", "vpsi"), arrays("psi", "psi"));
     let radius = 6.371_2e6;

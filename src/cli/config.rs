@@ -14,8 +14,8 @@ use isopsi::numerics::stream_function::PsiZero;
 use super::args::Common;
 
 /// A text that may be a bare number.
-fn number_or_text(text: &String) -> NumberOrText {
-    text.trim().parse().map_or_else(|_| NumberOrText::Text(text.clone()), NumberOrText::Number)
+fn number_or_text(text: &str) -> NumberOrText {
+    text.trim().parse().map_or_else(|_| NumberOrText::Text(text.to_owned()), NumberOrText::Number)
 }
 
 /// Numbers separated by commas.
@@ -95,22 +95,22 @@ pub fn survey_of(common: &Common) -> Result<Survey, IoError> {
     s.units.length = common.length_unit.clone();
     s.units.velocity = common.velocity_unit.clone();
     s.units.output = common.units.clone();
-    s.noise.sigma = common.sigma.as_ref().map(number_or_text);
-    s.noise.overlap = common.overlap.as_ref().map(number_or_text);
+    s.noise.sigma = common.sigma.as_deref().map(number_or_text);
+    s.noise.overlap = common.overlap.as_deref().map(number_or_text);
     s.ensemble.members = common.members;
     s.ensemble.seed = common.seed;
     s.screen.limit = common.screen_limit;
     s.screen.epsilon = common.screen_epsilon;
     s.screen.passes = common.screen_passes;
     s.screen.off = common.no_screen.then_some(true);
-    s.fit.smoothing = common.smoothing.as_ref().map(number_or_text);
+    s.fit.smoothing = common.smoothing.as_deref().map(number_or_text);
     s.fit.zero = common.psi_zero.clone();
     s.fit.sign = common.psi_sign.clone();
     s.streamlines.levels = common.levels.as_deref().map(|t| numbers(t, "--levels")).transpose()?;
     s.streamlines.count = common.count;
     s.streamlines.step = common.step;
     s.streamlines.tolerance = common.tolerance;
-    s.figure.width = common.width.as_ref().map(number_or_text);
+    s.figure.width = common.width.as_deref().map(number_or_text);
     s.figure.background = common.background.clone();
     s.figure.labels = common.no_labels.then_some(false);
     s.figure.formats = common.formats.clone().map(OneOrMany::One);

@@ -1,5 +1,5 @@
 //! Classical flows in closed form: psi, u, v with u = dpsi/dy, v = -dpsi/dx.
-#![allow(dead_code)]
+#![allow(dead_code, clippy::unwrap_used)]
 
 use std::f64::consts::{PI, TAU};
 

@@ -196,7 +196,7 @@ impl Layout {
         let plane: Vec<usize> =
             self.tidy.iter().zip(&self.roles).filter(|(_, r)| **r != Role::T).map(|(n, _)| *n).collect();
         let mut roles = if tidy == self.tidy {
-            self.roles.to_vec().into_iter()
+            self.roles.clone().into_iter()
         } else if tidy == plane {
             self.roles.iter().copied().filter(|r| *r != Role::T).collect::<Vec<_>>().into_iter()
         } else {
